@@ -29,6 +29,12 @@ impl<const N: usize> Outbox<N> {
         self.dropped
     }
 
+    /// Frames not yet wholly given to the line.
+    #[must_use]
+    pub fn waiting(&self) -> usize {
+        self.waiting.len().saturating_add(usize::from(self.sent < self.current.len()))
+    }
+
     /// Gives the line as much as it takes now.
     pub fn send(&mut self, line: &mut impl Line) {
         loop {
@@ -82,12 +88,14 @@ mod tests {
         outbox.push(frame(1));
         let mut line = Slow { budget: 2, taken: Vec::new() };
         outbox.send(&mut line);
+        assert_eq!(outbox.waiting(), 1);
         for byte in 2..=5 {
             outbox.push(frame(byte));
         }
         assert_eq!(outbox.dropped(), 2);
         line.budget = 100;
         outbox.send(&mut line);
+        assert_eq!(outbox.waiting(), 0);
         assert_eq!(line.taken, [1, 1, 1, 1, 4, 4, 4, 4, 5, 5, 5, 5]);
     }
 }

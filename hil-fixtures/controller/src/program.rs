@@ -105,6 +105,12 @@ impl<const OUTBOX: usize> Controller<OUTBOX> {
         self.outbox.dropped()
     }
 
+    /// Frames waiting for the line, the one being sent included.
+    #[must_use]
+    pub fn waiting(&self) -> usize {
+        self.outbox.waiting()
+    }
+
     /// Takes one converter scan. Call every `scan_ms`.
     pub fn scan(&mut self, source: &mut impl ChannelSource) {
         let Some(machine) = &mut self.machine else { return };

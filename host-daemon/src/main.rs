@@ -1,0 +1,7 @@
+//! Parse, run, exit code; everything else is in the library.
+
+use std::process::ExitCode;
+
+fn main() -> ExitCode {
+    offcurve::cli::main()
+}
