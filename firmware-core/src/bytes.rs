@@ -17,7 +17,10 @@ impl<'a> Writer<'a> {
         let end = self.written.saturating_add(bytes.len());
         match self.buffer.get_mut(self.written..end) {
             Some(place) => {
-                place.copy_from_slice(bytes);
+                // Not copy_from_slice: the optimiser does not see that the lengths agree, and would keep its panic.
+                for (to, &from) in place.iter_mut().zip(bytes) {
+                    *to = from;
+                }
                 self.written = end;
             }
             None => self.overflowed = true,

@@ -1,7 +1,8 @@
 //! CRC-32 (the ISO-HDLC parameters, as in Ethernet) over frames, profiles and estimates: one polynomial everywhere, so
 //! one table in flash.
 
-const CRC: crc::Crc<u32, crc::Table<1>> = crc::Crc::<u32, crc::Table<1>>::new(&crc::CRC_32_ISO_HDLC);
+/// One table of 1 KiB for all users.
+static CRC: crc::Crc<u32, crc::Table<1>> = crc::Crc::<u32, crc::Table<1>>::new(&crc::CRC_32_ISO_HDLC);
 
 /// CRC-32 of a byte string.
 #[must_use]
@@ -12,11 +13,9 @@ pub const fn crc32(bytes: &[u8]) -> u32 {
 /// A CRC-32 fed piece by piece.
 pub(crate) struct Running(crc::Digest<'static, u32, crc::Table<1>>);
 
-static SHARED: crc::Crc<u32, crc::Table<1>> = CRC;
-
 impl Running {
     pub(crate) fn new() -> Self {
-        Self(SHARED.digest())
+        Self(CRC.digest())
     }
 
     pub(crate) fn feed(&mut self, bytes: &[u8]) {

@@ -369,3 +369,6 @@ fn feed<T: Quantity>(crc: &mut Running, outcome: &Outcome<T>) {
 fn bits(value: f32) -> u32 {
     if value.is_nan() { f32::NAN.to_bits() } else { value.to_bits() }
 }
+
+#[cfg(test)]
+mod tests;

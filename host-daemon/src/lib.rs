@@ -10,6 +10,7 @@ pub mod config;
 #[cfg(feature = "demo")]
 pub mod demo;
 pub mod link;
+pub mod live;
 pub mod replay;
 pub mod runtime;
 pub mod store;

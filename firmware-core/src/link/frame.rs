@@ -99,20 +99,25 @@ impl<const N: usize> Decoder<N> {
 
 /// Undoes the stuffing in place; the length of what is left, or `None` if a code points outside.
 fn unstuff(body: &mut [u8]) -> Option<usize> {
-    let mut read = 0_usize;
-    let mut write = 0_usize;
-    while read < body.len() {
-        let code = usize::from(*body.get(read)?);
-        let end = read.checked_add(code)?;
-        if end > body.len() {
-            return None;
+    // Every byte but the codes moves down by one place, and the place before the next code becomes the zero it stands
+    // for: so reading and writing stay one apart. Byte by byte, because the optimiser cannot prove the bounds of a
+    // range taken from a received code, and would keep a panic for it.
+    let mut left = 0_u8; // bytes before the next code
+    for at in 0..body.len() {
+        let byte = *body.get(at)?;
+        let moved = match left {
+            0 => {
+                left = byte;
+                0
+            }
+            _ => byte,
+        };
+        left = left.checked_sub(1)?; // a code 0 cannot be: the delimiter is 0
+        if let Some(before) = at.checked_sub(1) {
+            *body.get_mut(before)? = moved;
         }
-        body.copy_within(read.checked_add(1)?..end, write);
-        write = write.checked_add(code)?; // code − 1 bytes, and the zero they are followed by
-        *body.get_mut(write.checked_sub(1)?)? = 0;
-        read = end;
     }
-    write.checked_sub(1) // the last zero is the delimiter's, not the payload's
+    if left == 0 { body.len().checked_sub(1) } else { None } // one byte less: the first code
 }
 
 fn check(body: &[u8]) -> Result<&[u8], FrameError> {

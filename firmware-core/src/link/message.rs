@@ -393,3 +393,6 @@ fn read_value(head: u8, input: &mut Reader<'_>) -> Option<Reading> {
 fn read_ack(input: &mut Reader<'_>) -> Option<Message> {
     Some(Message::Ack { boot: input.u64()?, number: input.u32()? })
 }
+
+#[cfg(test)]
+mod tests;

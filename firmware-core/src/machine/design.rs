@@ -83,6 +83,11 @@ pub fn stanitz(blades: u32) -> f64 {
 /// SIAM J. Sci. Stat. Comput. 5, in Brodlie's weighting). Ends: the three-point formula, limited to keep the shape.
 /// `x` must rise strictly. Slices of different length, or fewer than two points, give an empty result.
 #[must_use]
+#[allow(
+    clippy::indexing_slicing,
+    clippy::arithmetic_side_effects,
+    reason = "runs on a host only; every index is below the length checked on the first line"
+)]
 pub fn monotone_slopes(x: &[f64], y: &[f64]) -> Vec<f64> {
     if x.len() != y.len() || x.len() < 2 {
         return Vec::new();

@@ -188,6 +188,7 @@ pub enum Field {
     ReferenceSpeed,
     ReferenceDensity,
     BestEfficiencyFlow,
+    Curve,
     CurveDeviation,
     Impeller,
     Channel(Channel),
@@ -246,7 +247,22 @@ impl Profile {
         if !within(self.reference_density, 0.1, 20_000.0) {
             return refuse(Field::ReferenceDensity);
         }
-        if !within(self.best_efficiency_flow, 1e-7, 1e3) {
+        let (first, last) = self.curve.flow_range();
+        let (first, last) = (first.cubic_metres_per_second(), last.cubic_metres_per_second());
+        if !within(first, 0.0, 1e3) || !within(last, 1e-7, 1e3) {
+            return refuse(Field::Curve);
+        }
+        // Bounds far outside any machine, so that no law can overflow on an accepted profile.
+        let sane = |knot: &Knot| {
+            within(knot.head, -1e5, 1e5)
+                && within(knot.head_slope, -1e12, 1e12)
+                && within(knot.power, 0.0, 1e9)
+                && within(knot.power_slope, -1e16, 1e16)
+        };
+        if !self.curve.knots().iter().all(sane) {
+            return refuse(Field::Curve);
+        }
+        if !within(self.best_efficiency_flow, first.max(1e-7), last) {
             return refuse(Field::BestEfficiencyFlow);
         }
         if !within(self.head_curve_deviation, 0.0, 0.5) || !within(self.power_curve_deviation, 0.0, 0.5) {
@@ -363,7 +379,9 @@ impl Profile {
         let body = out.finish().ok_or(ProfileError::NoRoom)?;
         let checksum = crc32(into.get(..body).ok_or(ProfileError::NoRoom)?);
         let end = body.saturating_add(4);
-        into.get_mut(body..end).ok_or(ProfileError::NoRoom)?.copy_from_slice(&checksum.to_le_bytes());
+        // A fixed-size place: with copy_from_slice the optimiser keeps a panic for lengths that differ.
+        let place = into.get_mut(body..end).and_then(<[u8]>::first_chunk_mut::<4>).ok_or(ProfileError::NoRoom)?;
+        *place = checksum.to_le_bytes();
         Ok(end)
     }
 
@@ -373,24 +391,23 @@ impl Profile {
     /// [`ProfileError`], first cause found; a refused profile leaves the controller without one, never with half of one.
     pub fn decode(bytes: &[u8]) -> Result<Self, ProfileError> {
         let (body, checksum) = bytes.split_last_chunk::<4>().ok_or(ProfileError::WrongLength)?;
-        let mut input = Reader::new(body);
-        let found = input.u32().ok_or(ProfileError::WrongLength)?;
+        let mut input = Fields(Reader::new(body));
+        let found = input.u32()?;
         if found != link::LAYOUT {
             return Err(ProfileError::OtherLayout { found });
         }
         if crc32(body) != u32::from_le_bytes(*checksum) {
             return Err(ProfileError::ChecksumMismatch);
         }
-        let profile = Self::read(&mut input).ok_or(ProfileError::WrongLength)??;
-        if !input.is_empty() {
+        let profile = Self::read(&mut input)?;
+        if !input.0.is_empty() {
             return Err(ProfileError::WrongLength);
         }
         profile.check()?;
         Ok(profile)
     }
 
-    /// `None`: the bytes ran out. `Some(Err)`: they make no curve.
-    fn read(input: &mut Reader<'_>) -> Option<Result<Self, ProfileError>> {
+    fn read(input: &mut Fields<'_>) -> Result<Self, ProfileError> {
         let machine = input.u8()?;
         let gravity = input.f32()?;
         let density = input.f32()?;
@@ -401,52 +418,21 @@ impl Profile {
         let best_efficiency_flow = input.f32()?;
         let head_curve_deviation = input.f32()?;
         let power_curve_deviation = input.f32()?;
-        let count = usize::from(input.u8()?);
-        let mut knots: heapless::Vec<Knot, KNOTS> = heapless::Vec::new();
-        for _ in 0..count {
-            let knot = Knot {
-                flow: input.f32()?,
-                head: input.f32()?,
-                head_slope: input.f32()?,
-                power: input.f32()?,
-                power_slope: input.f32()?,
-            };
-            if knots.push(knot).is_err() {
-                return Some(Err(ProfileError::Curve(CurveError::KnotCount { found: count })));
-            }
-        }
-        let curve = match CurveTable::new(&knots) {
-            Ok(curve) => curve,
-            Err(error) => return Some(Err(ProfileError::Curve(error))),
-        };
-        let impeller = if input.u8()? == 0 {
-            None
-        } else {
-            Some(Impeller {
-                outlet_radius: input.f32()?,
-                outlet_area: input.f32()?,
-                outlet_cotangent: input.f32()?,
-                slip_factor: input.f32()?,
-                inlet_whirl: input.f32()?,
-                volumetric_efficiency: input.f32()?,
-                drag_torque: input.f32()?,
-                recirculation_onset: input.f32()?,
-                model_deviation: input.f32()?,
-            })
-        };
-        let speed = decode_channel(input)?;
-        let flow = decode_channel(input)?;
-        let suction_pressure = decode_channel(input)?;
-        let discharge_pressure = decode_channel(input)?;
-        let shaft_torque = decode_channel(input)?;
+        let curve = input.curve()?;
+        let impeller = if input.flag(Field::Impeller)? { Some(input.impeller()?) } else { None };
+        let speed = input.channel(Channel::Speed)?;
+        let flow = input.channel(Channel::Flow)?;
+        let suction_pressure = input.channel(Channel::SuctionPressure)?;
+        let discharge_pressure = input.channel(Channel::DischargePressure)?;
+        let shaft_torque = input.channel(Channel::ShaftTorque)?;
         let limits = Limits {
-            minimum_flow: decode_limit(input)?,
-            run_out: decode_limit(input)?,
-            torque: decode_limit(input)?,
+            minimum_flow: input.limit()?,
+            run_out: input.limit()?,
+            torque: input.limit()?,
             sensor_delay: input.f32()?,
         };
         let schedule = Schedule { scan_ms: input.u16()?, scans_per_step: input.u16()?, steps_per_record: input.u16()? };
-        Some(Ok(Self {
+        Ok(Self {
             machine,
             gravity,
             density,
@@ -466,7 +452,7 @@ impl Profile {
             shaft_torque,
             limits,
             schedule,
-        }))
+        })
     }
 
     /// CRC-32 of the byte form: two sides with the same checksum hold the same profile.
@@ -497,24 +483,88 @@ fn encode_channel(setup: &ChannelSetup, out: &mut Writer<'_>) {
     out.u8(u8::from(setup.from_drive));
 }
 
-fn decode_channel(input: &mut Reader<'_>) -> Option<ChannelSetup> {
-    let source = match input.u8()? {
-        0 => Source::NotFitted,
-        1 => Source::Loop { input: input.u8()?, low: input.f32()?, high: input.f32()? },
-        2 => Source::Pulses { per_revolution: input.u16()? },
-        _ => return None,
-    };
-    Some(ChannelSetup {
-        source,
-        deviation: input.f32()?,
-        relative_deviation: input.f32()?,
-        from_drive: input.u8()? != 0,
-    })
+/// The byte form's fields, read one after the other; running out of bytes is [`ProfileError::WrongLength`].
+struct Fields<'a>(Reader<'a>);
+
+impl Fields<'_> {
+    fn u8(&mut self) -> Result<u8, ProfileError> {
+        self.0.u8().ok_or(ProfileError::WrongLength)
+    }
+
+    fn u16(&mut self) -> Result<u16, ProfileError> {
+        self.0.u16().ok_or(ProfileError::WrongLength)
+    }
+
+    fn u32(&mut self) -> Result<u32, ProfileError> {
+        self.0.u32().ok_or(ProfileError::WrongLength)
+    }
+
+    fn f32(&mut self) -> Result<f32, ProfileError> {
+        self.0.f32().ok_or(ProfileError::WrongLength)
+    }
+
+    /// 0 or 1 and nothing else, so that a profile has one byte form.
+    fn flag(&mut self, field: Field) -> Result<bool, ProfileError> {
+        match self.u8()? {
+            0 => Ok(false),
+            1 => Ok(true),
+            _ => Err(ProfileError::OutOfRange { field }),
+        }
+    }
+
+    fn curve(&mut self) -> Result<CurveTable, ProfileError> {
+        let count = usize::from(self.u8()?);
+        let mut knots: heapless::Vec<Knot, KNOTS> = heapless::Vec::new();
+        for _ in 0..count {
+            let knot = Knot {
+                flow: self.f32()?,
+                head: self.f32()?,
+                head_slope: self.f32()?,
+                power: self.f32()?,
+                power_slope: self.f32()?,
+            };
+            knots.push(knot).map_err(|_| ProfileError::Curve(CurveError::KnotCount { found: count }))?;
+        }
+        CurveTable::new(&knots).map_err(ProfileError::Curve)
+    }
+
+    fn impeller(&mut self) -> Result<Impeller, ProfileError> {
+        Ok(Impeller {
+            outlet_radius: self.f32()?,
+            outlet_area: self.f32()?,
+            outlet_cotangent: self.f32()?,
+            slip_factor: self.f32()?,
+            inlet_whirl: self.f32()?,
+            volumetric_efficiency: self.f32()?,
+            drag_torque: self.f32()?,
+            recirculation_onset: self.f32()?,
+            model_deviation: self.f32()?,
+        })
+    }
+
+    fn channel(&mut self, channel: Channel) -> Result<ChannelSetup, ProfileError> {
+        let field = Field::Channel(channel);
+        let source = match self.u8()? {
+            0 => Source::NotFitted,
+            1 => Source::Loop { input: self.u8()?, low: self.f32()?, high: self.f32()? },
+            2 => Source::Pulses { per_revolution: self.u16()? },
+            _ => return Err(ProfileError::OutOfRange { field }),
+        };
+        Ok(ChannelSetup {
+            source,
+            deviation: self.f32()?,
+            relative_deviation: self.f32()?,
+            from_drive: self.flag(field)?,
+        })
+    }
+
+    fn limit(&mut self) -> Result<Option<Limit>, ProfileError> {
+        if !self.flag(Field::Limits)? {
+            return Ok(None);
+        }
+        Ok(Some(Limit { at: self.f32()?, deadband: self.f32()?, on_delay: self.f32()?, off_delay: self.f32()? }))
+    }
 }
 
-fn decode_limit(input: &mut Reader<'_>) -> Option<Option<Limit>> {
-    if input.u8()? == 0 {
-        return Some(None);
-    }
-    Some(Some(Limit { at: input.f32()?, deadband: input.f32()?, on_delay: input.f32()?, off_delay: input.f32()? }))
-}
+#[cfg(test)]
+mod tests;

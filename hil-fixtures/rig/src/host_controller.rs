@@ -338,7 +338,6 @@ fn signals(capture: &Capture) -> (PulseSnapshot, RunState) {
         Some(true) => Direction::Forward,
         Some(false) => Direction::Reverse,
     };
-    let pulses =
-        PulseSnapshot { count: capture.count, last_edge: capture.last_edge, now: capture.now, direction };
+    let pulses = PulseSnapshot { count: capture.count, last_edge: capture.last_edge, now: capture.now, direction };
     (pulses, if capture.running { RunState::Running } else { RunState::Stopped })
 }

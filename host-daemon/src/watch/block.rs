@@ -157,10 +157,11 @@ impl Block {
             return None;
         }
         let mean_of = |part: fn(&Third) -> Mean| {
-            let all = self.thirds.iter().map(part).fold(Mean::default(), |all, one| Mean {
-                sum: all.sum + one.sum,
-                count: all.count + one.count,
-            });
+            let all = self
+                .thirds
+                .iter()
+                .map(part)
+                .fold(Mean::default(), |all, one| Mean { sum: all.sum + one.sum, count: all.count + one.count });
             all.get()
         };
         Some(BlockResult {

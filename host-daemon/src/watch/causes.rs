@@ -150,11 +150,8 @@ pub(crate) fn rank(
     let best = scores.iter().map(|(_, score)| *score).fold(f64::INFINITY, f64::min);
     let weights: Vec<f64> = scores.iter().map(|(_, score)| (-0.5 * (score - best)).exp()).collect();
     let total: f64 = weights.iter().sum();
-    let mut ranked: Vec<RankedCause> = scores
-        .iter()
-        .zip(&weights)
-        .map(|((cause, _), weight)| RankedCause { cause, weight: weight / total })
-        .collect();
+    let mut ranked: Vec<RankedCause> =
+        scores.iter().zip(&weights).map(|((cause, _), weight)| RankedCause { cause, weight: weight / total }).collect();
     ranked.sort_by(|a, b| b.weight.total_cmp(&a.weight));
     ranked
 }

@@ -1,9 +1,9 @@
 //! The watch: decides from samples and estimates when a machine has left its curve, and says so. The daemon and
 //! `replay` use this one code.
 //!
-//! Samples are gathered into blocks ([`block`]), block means of the head and power deviations run against limits with
-//! delays and a deadband ([`chart`]), and an alarm carries ranked causes ([`causes`]) and a text for a person
-//! ([`words`]). Time comes with the samples; the clock of the computer is never asked.
+//! Samples are gathered into blocks (`block`), block means of the head and power deviations run against limits with
+//! delays and a deadband (`chart`), and an alarm carries ranked causes (`causes`) and a text for a person
+//! (`words`). Time comes with the samples; the clock of the computer is never asked.
 
 mod block;
 mod causes;
@@ -235,8 +235,11 @@ impl Watch {
         if before.next(deviates) == before {
             return;
         }
-        let (causes, text) =
-            if deviates { self.explain(at) } else { (Vec::new(), "Head and shaft power are back on the curve.".to_owned()) };
+        let (causes, text) = if deviates {
+            self.explain(at)
+        } else {
+            (Vec::new(), "Head and shaft power are back on the curve.".to_owned())
+        };
         changes.extend(self.change(at, AlarmKind::OffCurve, deviates, || causes, || text));
     }
 
@@ -244,11 +247,8 @@ impl Watch {
     fn explain(&self, at: f64) -> (Vec<RankedCause>, String) {
         let blocks: Vec<BlockResult> = self.recent.iter().copied().collect();
         let mean = (mean_of(&blocks, |block| block.head), mean_of(&blocks, |block| block.power));
-        let since = [&self.head, &self.power]
-            .into_iter()
-            .filter(|chart| chart.is_up())
-            .map(Chart::since)
-            .fold(at, f64::min);
+        let since =
+            [&self.head, &self.power].into_iter().filter(|chart| chart.is_up()).map(Chart::since).fold(at, f64::min);
         let causes = causes::rank(&self.profile, point_of(&blocks), mean.0, mean.1);
         let text = words::off_curve(&self.profile, &blocks, mean, at - since, &causes);
         (causes, text)

@@ -4,6 +4,7 @@
 //! |---|---|
 //! | `S`, length (u8), bytes out | as many bytes in |
 //! | `C` | the capture registers, 14 bytes |
+//! | `E`, 4 bytes | the same 4 bytes: after a time-out the image finds out which answer belongs to what |
 //!
 //! The pace is kept at capture answers only: with `t` in plant seconds since the first and `v` the speed, an answer
 //! leaves no earlier than `t / v` wall seconds after the first. Between two of them, a tenth of a plant second as the
@@ -78,6 +79,8 @@ pub struct TunnelCounters {
     pub captures: u64,
     /// Plant time passed between the first and the last capture, in microseconds.
     pub plant_microseconds: u64,
+    /// Echo requests answered. Above 0 the image has waited in vain for an answer at least once.
+    pub echoes: u64,
     /// Bytes that were no request. Above 0 the image and the rig do not speak the same tunnel.
     pub stray_bytes: u64,
     /// Times a paced run fell behind by more than half a second and gave up that time.
@@ -89,6 +92,7 @@ pub(super) struct Counters {
     transactions: AtomicU64,
     captures: AtomicU64,
     plant_microseconds: AtomicU64,
+    echoes: AtomicU64,
     stray_bytes: AtomicU64,
     fell_behind: AtomicU64,
 }
@@ -100,6 +104,7 @@ impl Counters {
             transactions: value(&self.transactions),
             captures: value(&self.captures),
             plant_microseconds: value(&self.plant_microseconds),
+            echoes: value(&self.echoes),
             stray_bytes: value(&self.stray_bytes),
             fell_behind: value(&self.fell_behind),
         }
@@ -170,6 +175,11 @@ impl<D: TunnelDevice> Server<D> {
                     self.keep_pace(&answer);
                     self.stream.write_all(&answer)?;
                     self.counters.captures.fetch_add(1, Ordering::Relaxed);
+                }
+                b'E' => {
+                    let mark: [u8; 4] = read_array(&mut requests)?;
+                    self.stream.write_all(&mark)?;
+                    self.counters.echoes.fetch_add(1, Ordering::Relaxed);
                 }
                 _ => {
                     self.counters.stray_bytes.fetch_add(1, Ordering::Relaxed);
@@ -245,10 +255,11 @@ pub(super) mod tests {
         let counters = Arc::new(Counters::default());
         let server = Server::new(rig, Complement::default(), None, Arc::clone(&counters));
         let thread = std::thread::spawn(move || server.run());
-        board.write_all(b"\x00C?S\x03\x01\x02\xffC").unwrap();
-        let answers: [u8; 14 + 3 + 14] = read_array(&mut board).unwrap();
+        board.write_all(b"\x00C?S\x03\x01\x02\xffE\x81SC\xffC").unwrap();
+        let answers: [u8; 14 + 3 + 4 + 14] = read_array(&mut board).unwrap();
         assert_eq!(answers[14..17], [0xfe, 0xfd, 0x00]);
-        assert_eq!(answers[25..29], 1000_u32.to_le_bytes(), "one transaction later");
+        assert_eq!(answers[17..21], *b"\x81SC\xff");
+        assert_eq!(answers[29..33], 1000_u32.to_le_bytes(), "one transaction later");
         drop(board);
         assert_eq!(thread.join().unwrap().now, 1000);
         assert_eq!(counters.stray_bytes.load(Ordering::Relaxed), 2);
