@@ -438,13 +438,14 @@ fn a_store_that_cannot_be_written_for_a_while_loses_nothing_of_what_was_read() {
     wait_until("10 records", || site.stored() >= 10);
     let other = Connection::open(site.store()).unwrap();
     other.execute_batch("BEGIN IMMEDIATE").unwrap();
-    let made = bench.made();
+    // On a busy computer some are lost before the daemon reads for the first time.
+    let (made, lost) = (bench.made(), site.totals().lost);
     wait_until("three seconds' records", || bench.made() > made + 1000);
     assert!(site.stored() <= u64::from(made) + 20, "nothing is stored while the store is locked");
     other.execute_batch("ROLLBACK").unwrap();
-    wait_until("them all stored", || site.stored() > u64::from(made) + 1000);
+    wait_until("them all stored", || site.stored() + lost > u64::from(made) + 1000);
     let summary = daemon.stop();
-    assert_eq!((summary.lost, summary.stored), (0, summary.received), "the channel held them all");
+    assert_eq!((summary.lost, summary.stored), (lost, summary.received), "the channel held them all");
     assert_whole(&site);
 }
 

@@ -46,13 +46,22 @@ fn listing(ports: &[SerialPortInfo], folders: &[&Path]) -> String {
         let best = lasting.get(device).and_then(|names| names.first());
         let (name, note) = match best {
             Some(name) => (name, ""),
-            None => (device, "   # no lasting name: may change when things are plugged in another order"),
+            // A built-in port (ttyS0) keeps its name, an adapter's counts up in the order of plugging in.
+            None if is_numbered_adapter(device) => {
+                (device, "   # no lasting name: may change when things are plugged in another order")
+            }
+            None => (device, ""),
         };
         let _ = writeln!(text, "    in the plant file: port = \"{}\"{note}", name.display());
     }
     text += "To open a port, the daemon's user must be in the group of the device, on most systems `dialout`:\n";
     text += "    sudo usermod -aG dialout USER    (then log in again)\n";
     text
+}
+
+fn is_numbered_adapter(device: &Path) -> bool {
+    let name = device.file_name().unwrap_or_default().to_string_lossy();
+    ["ttyUSB", "ttyACM"].iter().any(|kind| name.starts_with(kind))
 }
 
 /// Device to its lasting names.
@@ -98,7 +107,7 @@ mod tests {
     #[test]
     fn the_lasting_name_is_the_one_to_use() {
         let folder = tempfile::tempdir().unwrap();
-        let (device, other) = (folder.path().join("ttyUSB7"), folder.path().join("ttyS0"));
+        let [device, other, built_in] = ["ttyUSB7", "ttyACM0", "ttyS0"].map(|name| folder.path().join(name));
         std::fs::write(&device, "").unwrap();
         let by_id = folder.path().join("by-id");
         std::fs::create_dir(&by_id).unwrap();
@@ -108,9 +117,10 @@ mod tests {
             port_type: SerialPortType::Unknown,
         };
         let device = std::fs::canonicalize(device).unwrap();
-        let text = listing(&[port(&device), port(&other)], &[&by_id, &folder.path().join("by-path")]);
+        let text = listing(&[port(&device), port(&other), port(&built_in)], &[&by_id, &folder.path().join("by-path")]);
         assert!(text.contains(&format!("port = \"{}\"\n", by_id.join("usb-adapter-if00").display())), "{text}");
         assert!(text.contains(&format!("port = \"{}\"   # no lasting name", other.display())), "{text}");
-        assert_eq!(text.matches("in the plant file").count(), 2);
+        assert!(text.contains(&format!("port = \"{}\"\n", built_in.display())), "{text}");
+        assert_eq!(text.matches("in the plant file").count(), 3);
     }
 }

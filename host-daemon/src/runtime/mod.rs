@@ -1,7 +1,7 @@
 //! The daemon's order of work: read, store durably, acknowledge, judge, tell. Never another order: what was judged or
 //! acknowledged can be looked up afterwards, whatever happens to the process.
 //!
-//! Batches: what has come within [`GATHER`] goes into one transaction, so a slow disk costs delay, not records. While a
+//! Batches: what has come within a tenth of a second goes into one transaction, so a slow disk costs delay, not records. While a
 //! batch is being written the next one collects in a bounded channel.
 
 pub mod clock;
