@@ -184,7 +184,7 @@ fn state_words(machine: &Machine, now: &Now) -> String {
         };
     }
     match now.estimate.head_residual {
-        Ok(_) => "on its curve".into(),
+        Ok(_) => "no alarm".into(),
         Err(Missing::NotRunning) => "not running".into(),
         Err(missing) => format!("not compared: {}", missing.name()),
     }
@@ -376,8 +376,8 @@ mod tests {
         let machine = running();
         assert_eq!(
             show(&machine, 0),
-            "Pump 00:12:34 1480 rev/min 83.9 m3/h head 31.36 m (±0.16) efficiency 74 % against curve -2.0 % on its \
-             curve"
+            "Pump 00:12:34 1480 rev/min 83.9 m3/h head 31.36 m (±0.16) efficiency 74 % against curve -2.0 % no \
+             alarm"
         );
         let figures = row(&machine, 6, Duration::ZERO).figures;
         assert!(figures.starts_with("Pump    00:12:34  "), "names of other lengths line up: {figures}");
@@ -389,7 +389,7 @@ mod tests {
         assert_eq!(row.fit(0).len(), 1);
         assert_eq!(row.fit(200).len(), 1);
         let two = row.fit(60);
-        assert_eq!(two[1], "    on its curve");
+        assert_eq!(two[1], "    no alarm");
         assert!(two.iter().all(|line| line.chars().count() < 60), "{two:?}");
     }
 
@@ -428,7 +428,7 @@ mod tests {
         let mut machine = running();
         assert_eq!(show(&machine, 5), "Pump 00:12:34 no data for 5 s");
         machine.silent_after = 3 * Duration::from_secs(10); // a record every ten seconds
-        assert!(show(&machine, 29).ends_with("on its curve") && show(&machine, 30).ends_with("no data for 30 s"));
+        assert!(show(&machine, 29).ends_with("no alarm") && show(&machine, 30).ends_with("no data for 30 s"));
         machine.silent_after = SILENT;
         machine.now = None;
         assert_eq!(show(&machine, 1), "Pump waiting for the first record");

@@ -6,6 +6,7 @@
 
 use std::{
     collections::{BTreeMap, BTreeSet},
+    fs,
     path::{Path, PathBuf},
     process::Command,
 };
@@ -148,4 +149,47 @@ fn another_version_below_the_core_is_seen() {
     assert_eq!(differences(&host, &boards).map(|all| all.len()), Ok(1));
     boards.remove("micromath");
     assert!(differences(&host, &boards).is_err());
+}
+
+/// Names under the tables of a manifest whose name ends in `dependencies`, our own crates left out.
+fn foreign_dependencies(manifest: &toml::Table) -> Vec<String> {
+    let mut found = Vec::new();
+    for (key, value) in manifest {
+        let toml::Value::Table(table) = value else { continue };
+        if key.ends_with("dependencies") {
+            found.extend(table.keys().filter(|name| !name.starts_with("offcurve")).cloned());
+        } else {
+            found.extend(foreign_dependencies(table));
+        }
+    }
+    found
+}
+
+#[test]
+fn every_dependency_is_justified_in_one_line() {
+    let text = fs::read_to_string(root().join("DEVELOPERS.md")).expect("it is part of the project");
+    let named: Vec<&str> = text
+        .lines()
+        .filter_map(|line| line.strip_prefix("| ")?.split_once(" | ").map(|(names, _)| names))
+        .flat_map(|names| names.split(", "))
+        .map(|name| name.split(' ').next().unwrap_or(name))
+        .collect();
+    let manifests = [
+        "Cargo.toml",
+        "firmware-core/Cargo.toml",
+        "host-daemon/Cargo.toml",
+        "hil-fixtures/controller/Cargo.toml",
+        "hil-fixtures/plant/Cargo.toml",
+        "hil-fixtures/rig/Cargo.toml",
+        "hil-fixtures/boards/emulated-m4f/Cargo.toml",
+        "tests/Cargo.toml",
+    ];
+    for manifest in manifests {
+        let text = fs::read_to_string(root().join(manifest)).expect("a manifest");
+        let dependencies = foreign_dependencies(&text.parse().expect("a TOML table"));
+        assert!(manifest == "Cargo.toml" || !dependencies.is_empty(), "{manifest} needs nothing?");
+        for name in dependencies {
+            assert!(named.contains(&name.as_str()), "{manifest}: {name} has no line in DEVELOPERS.md");
+        }
+    }
 }
