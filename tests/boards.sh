@@ -4,6 +4,7 @@
 #   tests/boards.sh build   builds the image; its path is the last line printed
 #   tests/boards.sh size    builds, then prints flash (text + data) and static RAM (data + bss) in bytes
 #   tests/boards.sh proof   links the image at optimisation s, 3 and z, and shows that one reachable panic breaks it
+#   tests/boards.sh cost    counts the instructions of one step of the core, part by part, on the emulated processor
 #   tests/boards.sh where   if the image does not link: names the calls that end in a panic, inlined ones too
 #   tests/boards.sh locks   checks that image and host are built from the same versions of the numeric crates
 #
@@ -55,14 +56,16 @@ find_linker() {
 }
 
 # build_image PROFILE [cargo options]: leaves the image at $output/$target/PROFILE/emulated-m4f
-build_image() {
-    profile=$1
-    shift
+build_image() { build_package emulated-m4f "$@"; }
+
+build_package() {
+    package=$1 profile=$2
+    shift 2
     cd "$boards"
     if [ "$route" = stable ]; then
-        CARGO_TARGET_DIR=$output cargo build --locked --profile "$profile" "$@"
+        CARGO_TARGET_DIR=$output cargo build --locked -p "$package" --profile "$profile" "$@"
     else
-        CARGO_TARGET_DIR=$output RUSTC_BOOTSTRAP=1 /usr/bin/cargo build --locked --profile "$profile" "$@" \
+        CARGO_TARGET_DIR=$output RUSTC_BOOTSTRAP=1 /usr/bin/cargo build --locked -p "$package" --profile "$profile" "$@" \
             --config 'unstable.build-std=["core"]' \
             --config 'build.rustc="/usr/bin/rustc"' \
             --config "target.$target.linker=\"$linker\""
@@ -139,6 +142,18 @@ size_of_image() {
     fail "no size tool: apt-get install binutils"
 }
 
+# Instructions, exactly: with icount each takes 128 ns of the emulated clock.
+cost() {
+    command -v qemu-system-arm >/dev/null || fail "no qemu-system-arm: apt-get install qemu-system-arm"
+    for profile in release proof-3; do
+        build_package step-cost "$profile" || fail "no image, see above"
+        say "step cost, profile $profile ($(sed -n "/profile.$profile]/,/^\$/s/opt-level = //p" "$boards/Cargo.toml"))"
+        timeout 600 qemu-system-arm -M mps2-an386 -icount shift=7 -display none -monitor none -serial none \
+            -semihosting-config enable=on,target=native -kernel "$output/$target/$profile/step-cost" ||
+            fail "the image did not finish"
+    done
+}
+
 case ${1:-} in
 build)
     choose_route
@@ -155,13 +170,17 @@ proof)
     choose_route
     proof
     ;;
+cost)
+    choose_route
+    cost
+    ;;
 where)
     choose_route
     for profile in release proof-3 proof-z; do where "$profile"; done
     ;;
 locks) locks ;;
 *)
-    sed -n '2,8s/^# \{0,1\}//p' "$0" >&2
+    sed -n '2,9s/^# \{0,1\}//p' "$0" >&2
     exit 2
     ;;
 esac

@@ -47,6 +47,25 @@ impl Deviation {
         Self(code.clamp(0, i32::from(u8::MAX)) as u8)
     }
 
+    /// Smallest code that is not below the root of `variance` (the base's unit squared): uncertainties add as variances,
+    /// so a sum of them is coded without taking a root. NaN and infinity give [`Self::LARGEST`].
+    #[must_use]
+    pub fn at_least_root(variance: f32, base_exponent: i8) -> Self {
+        if variance.is_nan() || variance == f32::INFINITY {
+            return Self::LARGEST;
+        }
+        if variance < f32::MIN_POSITIVE {
+            return Self(0);
+        }
+        let bits = variance.to_bits();
+        let octave = ((bits >> 23) as i32).wrapping_sub(127);
+        let mantissa = f32::from_bits((bits & 0x007f_ffff) | (127 << 23));
+        // One octave of variance is half an octave of its root: four steps, and every other of the table.
+        let step = STEPS.iter().step_by(2).filter(|&&step| step < mantissa).count() as i32;
+        let code = octave.wrapping_mul(4).wrapping_add(step).wrapping_sub(i32::from(base_exponent).wrapping_mul(8));
+        Self(code.clamp(0, i32::from(u8::MAX)) as u8)
+    }
+
     /// The standard uncertainty, in the unit of the base.
     #[must_use]
     pub fn value(self, base_exponent: i8) -> f32 {
@@ -81,7 +100,24 @@ mod tests {
         assert_eq!(Deviation::at_least(f32::INFINITY, -16), Deviation::LARGEST);
     }
 
+    #[test]
+    fn roots_saturate_as_values_do() {
+        assert_eq!(Deviation::at_least_root(0.0, -16).code(), 0);
+        assert_eq!(Deviation::at_least_root(-1.0, -16).code(), 0);
+        assert_eq!(Deviation::at_least_root(1e18, -16), Deviation::LARGEST);
+        assert_eq!(Deviation::at_least_root(f32::NAN, -16), Deviation::LARGEST);
+        assert_eq!(Deviation::at_least_root(f32::INFINITY, -16), Deviation::LARGEST);
+        assert_eq!(Deviation::at_least_root(4.0, -16).value(-16), 2.0);
+    }
+
     proptest! {
+        #[test]
+        fn a_root_rounds_up_by_nine_per_cent_at_most(variance in 4e-10_f32..3.6e9) {
+            let root = f64::from(variance).sqrt();
+            let coded = f64::from(Deviation::at_least_root(variance, -16).value(-16));
+            prop_assert!(coded >= root * (1.0 - 1e-7) && coded <= root * 1.0906, "√{variance} became {coded}");
+        }
+
         #[test]
         fn rounds_up_by_nine_per_cent_at_most(value in 2e-5_f32..6e4) {
             let coded = Deviation::at_least(value, -16).value(-16);

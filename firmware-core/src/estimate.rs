@@ -195,7 +195,7 @@ pub fn estimate(sample: &ConditionedSample, profile: &Profile) -> Estimate {
     };
 
     let momentum_torque = momentum_torque(profile, &speed, &ratio, &flow, &relative_flow, &density);
-    let measured = input(sample, Channel::ShaftTorque, Input::Torque);
+    let measured = reading(sample, Channel::ShaftTorque).map(|(torque, deviation)| Uncertain::once(torque, deviation));
     let (shaft_torque, torque_source) = match (measured, &momentum_torque) {
         (Ok(torque), _) if profile.shaft_torque.from_drive => (Ok(torque), Source::FromDrive),
         (Ok(torque), _) => (Ok(torque), Source::Measured),
@@ -241,21 +241,26 @@ fn both(a: &Step, b: &Step, law: fn(&Uncertain, &Uncertain) -> Uncertain) -> Ste
     }
 }
 
-fn input(sample: &ConditionedSample, channel: Channel, input: Input) -> Step {
+/// Value and standard uncertainty of a channel.
+fn reading(sample: &ConditionedSample, channel: Channel) -> Result<(f32, f32), Missing> {
     match sample.channel(channel) {
         Ok(reading) if reading.value.is_finite() => {
-            Ok(Uncertain::input(input, reading.value, reading.deviation.value(channel.deviation_base())))
+            Ok((reading.value, reading.deviation.value(channel.deviation_base())))
         }
         _ => Err(Missing::Channel(channel)),
     }
 }
 
+fn input(sample: &ConditionedSample, channel: Channel, input: Input) -> Step {
+    reading(sample, channel).map(|(value, deviation)| Uncertain::input(input, value, deviation))
+}
+
 fn head(sample: &ConditionedSample, profile: &Profile, flow: &Step, density: &Uncertain) -> Step {
-    let suction = input(sample, Channel::SuctionPressure, Input::PressureRise)?;
-    let discharge = input(sample, Channel::DischargePressure, Input::PressureRise)?;
+    let (suction, of_suction) = reading(sample, Channel::SuctionPressure)?;
+    let (discharge, of_discharge) = reading(sample, Channel::DischargePressure)?;
     // Two gauges, independent errors: they add as variances, so they are one input of their own.
-    let deviation = crate::math::root_sum_square([suction.deviation(), discharge.deviation()]);
-    let rise = Uncertain::input(Input::PressureRise, discharge.value - suction.value, deviation);
+    let deviation = crate::math::root_sum_square([of_suction, of_discharge]);
+    let rise = Uncertain::input(Input::PressureRise, discharge - suction, deviation);
     let flow = match flow {
         Ok(flow) => *flow,
         // Equal bores: no velocity head, so the flow is not needed.
@@ -321,15 +326,15 @@ fn expected(profile: &Profile, ratio: &Step, flow: &Step, density: &Uncertain) -
         return (Err(Missing::OutsideCurve), Err(Missing::OutsideCurve));
     };
     let square = ratio.times(ratio);
+    let cube = square.times(ratio);
     let head = at_reference.through(point.head.metres(), point.head_slope).times(&square);
     let power = at_reference
         .through(point.power.watts(), point.power_slope)
-        .times(&square)
-        .times(ratio)
+        .times(&cube)
         .times(&density.scaled(1.0 / profile.reference_density));
     (
-        Ok(head.with_model(profile.head_curve_deviation * head.value)),
-        Ok(power.with_model(profile.power_curve_deviation * power.value)),
+        Ok(head.with_own(profile.head_curve_deviation * head.value)),
+        Ok(power.with_own(profile.power_curve_deviation * power.value)),
     )
 }
 

@@ -40,7 +40,7 @@ pub(crate) fn total_head(
 ) -> Uncertain {
     let static_head = pressure_rise.over(&density.scaled(gravity));
     let velocity_head = flow.times(flow).scaled(taps.velocity_head);
-    static_head.plus(&velocity_head).plus(&Uncertain::exact(taps.elevation))
+    static_head.plus(&velocity_head).shifted(taps.elevation)
 }
 
 /// Power put into the liquid, W: `ρgQH`. Negative when flow and head have opposite signs.

@@ -60,7 +60,7 @@ pub(crate) fn shaft_torque(
     let drag = ratio.times(ratio).times(density).scaled(impeller.drag_torque / reference_density);
     let torque = stream.plus(&drag);
     let relative = impeller.model_deviation.max(LEAST_DEVIATION);
-    torque.with_model(relative * torque.value)
+    torque.with_own(relative * torque.value)
 }
 
 #[cfg(test)]

@@ -1,56 +1,63 @@
 //! A value that carries how each uncertain input moves it, so that every law is written once, as physics, and its
 //! standard uncertainty follows by itself (first order, JCGM 100 clause 5).
 //!
-//! `by[i]` is (∂value/∂xᵢ)·u(xᵢ) in the value's own unit: a reading that enters twice adds up before it is squared,
-//! so correlations are kept (power formed from torque and speed, efficiency from that power, share their speed error).
+//! Four inputs can enter one law twice, so each has its own signed contribution (∂value/∂xᵢ)·u(xᵢ), in the value's unit:
+//! it adds up before it is squared, and correlations are kept (power formed from torque and speed, and efficiency from
+//! that power, share their speed error). What enters once only, a torque reading or a model's own error, is a variance
+//! that just adds.
 //! First order only: near zero flow, where a relative uncertainty grows without limit, the laws refuse instead.
 
 use crate::math;
 
-/// The independent inputs of one estimate.
+/// The inputs that may meet themselves again within one law.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub(crate) enum Input {
     /// Discharge minus suction pressure, both gauges' uncertainties combined.
     PressureRise,
     Flow,
     Speed,
-    Torque,
     Density,
-    /// What a model or a curve adds on its own: one per value, never shared by two values that meet in a law.
-    Model,
 }
 
-const INPUTS: usize = 6;
-
+/// Named fields, not an array: there is no loop for a compiler that saves space to leave rolled.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub(crate) struct Uncertain {
     pub(crate) value: f32,
-    by: [f32; INPUTS],
+    rise: f32,
+    flow: f32,
+    speed: f32,
+    density: f32,
+    /// Variance of what enters once, in the value's unit squared.
+    own: f32,
 }
 
 impl Uncertain {
     /// A value known exactly, for this purpose.
     pub(crate) const fn exact(value: f32) -> Self {
-        Self { value, by: [0.0; INPUTS] }
+        Self { value, rise: 0.0, flow: 0.0, speed: 0.0, density: 0.0, own: 0.0 }
     }
 
-    /// An input with its standard uncertainty (same unit, not negative).
-    pub(crate) fn input(input: Input, value: f32, deviation: f32) -> Self {
-        let own = |at: Input| if at == input { deviation } else { 0.0 };
-        let by = [
-            own(Input::PressureRise),
-            own(Input::Flow),
-            own(Input::Speed),
-            own(Input::Torque),
-            own(Input::Density),
-            own(Input::Model),
-        ];
-        Self { value, by }
+    /// A shared input with its standard uncertainty (same unit, not negative).
+    pub(crate) const fn input(input: Input, value: f32, deviation: f32) -> Self {
+        let exact = Self::exact(value);
+        match input {
+            Input::PressureRise => Self { rise: deviation, ..exact },
+            Input::Flow => Self { flow: deviation, ..exact },
+            Input::Speed => Self { speed: deviation, ..exact },
+            Input::Density => Self { density: deviation, ..exact },
+        }
+    }
+
+    /// An input that enters every law once at most, with its standard uncertainty.
+    pub(crate) const fn once(value: f32, deviation: f32) -> Self {
+        Self::exact(value).with_own(deviation)
     }
 
     /// Standard uncertainty, in the value's unit.
     pub(crate) fn deviation(&self) -> f32 {
-        math::root_sum_square(self.by)
+        let shared =
+            self.rise * self.rise + self.flow * self.flow + self.speed * self.speed + self.density * self.density;
+        math::sqrt(shared + self.own)
     }
 
     pub(crate) fn plus(&self, other: &Self) -> Self {
@@ -67,8 +74,9 @@ impl Uncertain {
 
     /// Division; the caller has made sure that the divisor is not zero.
     pub(crate) fn over(&self, other: &Self) -> Self {
-        let quotient = self.value / other.value;
-        self.combine(quotient, 1.0 / other.value, other, -quotient / other.value)
+        let inverse = 1.0 / other.value;
+        let quotient = self.value * inverse;
+        self.combine(quotient, inverse, other, -quotient * inverse)
     }
 
     pub(crate) fn scaled(&self, factor: f32) -> Self {
@@ -77,22 +85,37 @@ impl Uncertain {
 
     /// A function of this value alone: its result and its slope here.
     pub(crate) fn through(&self, value: f32, slope: f32) -> Self {
-        Self { value, by: self.by.map(|part| part * slope) }
+        Self {
+            value,
+            rise: self.rise * slope,
+            flow: self.flow * slope,
+            speed: self.speed * slope,
+            density: self.density * slope,
+            own: self.own * (slope * slope),
+        }
     }
 
-    /// Adds an uncertainty of its own, `deviation` in the value's unit, as [`Input::Model`].
-    pub(crate) fn with_model(mut self, deviation: f32) -> Self {
-        let [.., model] = &mut self.by;
-        *model = math::root_sum_square([*model, deviation]);
+    /// Moved by an exact offset.
+    pub(crate) fn shifted(mut self, offset: f32) -> Self {
+        self.value += offset;
+        self
+    }
+
+    /// Adds an uncertainty that enters here and nowhere else, `deviation` in the value's unit.
+    pub(crate) const fn with_own(mut self, deviation: f32) -> Self {
+        self.own += deviation * deviation;
         self
     }
 
     fn combine(&self, value: f32, own: f32, other: &Self, others: f32) -> Self {
-        let mut by = self.by;
-        for (mine, theirs) in by.iter_mut().zip(&other.by) {
-            *mine = own * *mine + others * *theirs;
+        Self {
+            value,
+            rise: own * self.rise + others * other.rise,
+            flow: own * self.flow + others * other.flow,
+            speed: own * self.speed + others * other.speed,
+            density: own * self.density + others * other.density,
+            own: own * own * self.own + others * others * other.own,
         }
-        Self { value, by }
     }
 }
 
@@ -120,8 +143,8 @@ mod tests {
     }
 
     #[test]
-    fn model_uncertainty_adds_in_quadrature() {
-        let torque = Uncertain::exact(50.0).with_model(3.0).with_model(4.0);
+    fn what_enters_once_adds_as_a_variance() {
+        let torque = Uncertain::once(50.0, 3.0).with_own(4.0);
         assert!((torque.deviation() - 5.0).abs() < 1e-6);
     }
 }

@@ -5,7 +5,7 @@
 //! The scans of a step span whole mains periods, so hum averages out; the band decides on the mean, not on one scan.
 
 use super::{Channel, ChannelFault, ChannelValue, Reading};
-use crate::{board::LoopCurrent, deviation::Deviation, machine::profile::ChannelSetup, math};
+use crate::{board::LoopCurrent, deviation::Deviation, machine::profile::ChannelSetup};
 
 /// At or below: failed low, mA.
 pub const FAILURE_LOW: f32 = 3.6;
@@ -59,11 +59,12 @@ impl Accumulator {
         let per_milliampere = (high - low) / 16.0;
         let value = low + (mean - 4.0) * per_milliampere;
         let variance = if count > 1 { ((squares - n * offset * offset) / (n - 1.0)).max(0.0) } else { 0.0 };
-        let scatter_of_mean = math::sqrt(variance / n) * per_milliampere;
-        let deviation = math::root_sum_square([setup.deviation, setup.relative_deviation * value, scatter_of_mean]);
+        let of_mean = variance / n * (per_milliampere * per_milliampere);
+        let relative = setup.relative_deviation * value;
+        let total = setup.deviation * setup.deviation + relative * relative + of_mean;
         Ok(ChannelValue {
             value,
-            deviation: Deviation::at_least(deviation, channel.deviation_base()),
+            deviation: Deviation::at_least_root(total, channel.deviation_base()),
             saturated: !(RANGE_LOW..=RANGE_HIGH).contains(&mean),
             age: 0,
         })

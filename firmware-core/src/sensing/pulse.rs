@@ -5,7 +5,7 @@
 //! after [`STOP_SECONDS`] it is zero.
 
 use super::{Channel, ChannelFault, ChannelValue, LARGEST_AGE, Reading};
-use crate::{board::PulseSnapshot, deviation::Deviation, machine::profile::ChannelSetup, math};
+use crate::{board::PulseSnapshot, deviation::Deviation, machine::profile::ChannelSetup};
 
 /// Without an edge for this long the shaft stands still, s.
 pub const STOP_SECONDS: f32 = 2.0;
@@ -63,11 +63,11 @@ impl SpeedMeter {
                 self.resolution = bound;
             }
         }
-        let deviation =
-            math::root_sum_square([setup.deviation, setup.relative_deviation * self.speed, self.resolution]);
+        let relative = setup.relative_deviation * self.speed;
+        let variance = setup.deviation * setup.deviation + relative * relative + self.resolution * self.resolution;
         Ok(ChannelValue {
             value: self.speed,
-            deviation: Deviation::at_least(deviation, Channel::Speed.deviation_base()),
+            deviation: Deviation::at_least_root(variance, Channel::Speed.deviation_base()),
             saturated: false,
             age: ((waited_seconds * 10.0) as u8).min(LARGEST_AGE),
         })
