@@ -17,8 +17,8 @@ target=thumbv7em-none-eabihf
 symbol=ERROR_this_image_contains_a_reachable_panic
 root=$(cd "$(dirname "$0")/.." && pwd)
 boards=$root/hil-fixtures/boards
-output=${CARGO_TARGET_DIR:+$CARGO_TARGET_DIR/boards}
-output=${output:-$boards/target}
+# Always here, whatever CARGO_TARGET_DIR says: the demo and the end-to-end tests look for the image in this place.
+output=$boards/target
 
 # Flags from outside would replace the linker script, not add to it.
 unset RUSTFLAGS CARGO_ENCODED_RUSTFLAGS CARGO_BUILD_TARGET CARGO_BUILD_RUSTFLAGS

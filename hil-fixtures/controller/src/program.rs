@@ -3,6 +3,7 @@
 use crate::Outbox;
 use offcurve_core::{
     board::{ChannelSource, LOOP_INPUTS, Line, LoopCurrent, PulseSnapshot, RunState},
+    checksum::crc32,
     conditioning::Conditioner,
     estimate::{Estimate, estimate},
     guard::Guard,
@@ -69,7 +70,8 @@ impl<const OUTBOX: usize> Controller<OUTBOX> {
     /// [`ProfileError`]; the profile in use, or none, stays.
     pub fn load_profile(&mut self, bytes: &[u8]) -> Result<(), ProfileError> {
         let profile = Profile::decode(bytes)?;
-        let checksum = profile.checksum();
+        // A profile has one byte form, so this is its checksum; encoding it again would cost 640 bytes of stack.
+        let checksum = crc32(bytes);
         self.machine = Some(Machine {
             profile,
             checksum,
