@@ -60,6 +60,10 @@ quantity! {
     GaugePressure, from_pascals, pascals, "pascal above the local atmosphere"
 }
 quantity! {
+    /// Difference of two pressures of one fluid, stored in pascal; positive when the first named is higher.
+    PressureDifference, from_pascals, pascals, "pascal"
+}
+quantity! {
     /// Torque about the shaft axis, stored in N·m; positive when the driver turns the impeller.
     Torque, from_newton_metres, newton_metres, "N·m"
 }
@@ -74,6 +78,22 @@ quantity! {
 quantity! {
     /// Density, stored in kg/m³; positive.
     Density, from_kilograms_per_cubic_metre, kilograms_per_cubic_metre, "kg/m³"
+}
+quantity! {
+    /// Pressure above vacuum, stored in pascal; positive.
+    AbsolutePressure, from_pascals, pascals, "pascal above vacuum"
+}
+quantity! {
+    /// Thermodynamic temperature, stored in kelvin; positive.
+    Temperature, from_kelvins, kelvins, "kelvin"
+}
+quantity! {
+    /// Dynamic viscosity μ, stored in Pa·s; positive.
+    DynamicViscosity, from_pascal_seconds, pascal_seconds, "Pa·s"
+}
+quantity! {
+    /// Kinematic viscosity ν = μ/ρ, stored in m²/s; positive.
+    KinematicViscosity, from_square_metres_per_second, square_metres_per_second, "m²/s"
 }
 quantity! {
     /// A plain ratio: efficiency, or a flow relative to the flow of best efficiency.
@@ -91,6 +111,42 @@ impl AngularSpeed {
     #[must_use]
     pub const fn revolutions_per_minute(self) -> f32 {
         self.0 * (30.0 / core::f32::consts::PI)
+    }
+}
+
+impl GaugePressure {
+    /// The same pressure above vacuum, where the air at the gauge has the pressure `atmosphere`.
+    #[must_use]
+    pub fn above(self, atmosphere: AbsolutePressure) -> AbsolutePressure {
+        AbsolutePressure(self.0 + atmosphere.0)
+    }
+}
+
+impl Temperature {
+    /// From degrees Celsius: T = t + 273.15. Steps of f32 near 300 K are 3e-5 K.
+    #[must_use]
+    pub const fn from_degrees_celsius(value: f32) -> Self {
+        Self(value + 273.15)
+    }
+
+    /// The value in degrees Celsius.
+    #[must_use]
+    pub const fn degrees_celsius(self) -> f32 {
+        self.0 - 273.15
+    }
+}
+
+impl KinematicViscosity {
+    /// From mm²/s (the same number in centistokes).
+    #[must_use]
+    pub const fn from_square_millimetres_per_second(value: f32) -> Self {
+        Self(value * 1e-6)
+    }
+
+    /// The value in mm²/s.
+    #[must_use]
+    pub const fn square_millimetres_per_second(self) -> f32 {
+        self.0 * 1e6
     }
 }
 
@@ -112,6 +168,18 @@ mod tests {
         let speed = AngularSpeed::from_revolutions_per_minute(1480.0);
         assert!((speed.radians_per_second() - 154.985_24).abs() < 1e-4);
         assert!((speed.revolutions_per_minute() - 1480.0).abs() < 2e-4);
+    }
+
+    #[test]
+    fn temperature_pressure_and_viscosity_convert() {
+        let boiling = Temperature::from_degrees_celsius(100.0);
+        assert_eq!(boiling, Temperature::from_kelvins(373.15));
+        assert!((boiling.degrees_celsius() - 100.0).abs() < 4e-5);
+        let suction = GaugePressure::from_pascals(-30_000.0).above(AbsolutePressure::from_pascals(101_325.0));
+        assert_eq!(suction, AbsolutePressure::from_pascals(71_325.0));
+        let oil = KinematicViscosity::from_square_millimetres_per_second(120.0);
+        assert!((oil.square_metres_per_second() - 1.2e-4).abs() < 1e-11);
+        assert!((oil.square_millimetres_per_second() - 120.0).abs() < 2e-5);
     }
 
     #[test]

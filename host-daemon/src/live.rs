@@ -94,7 +94,7 @@ impl Board {
     /// A line for each machine.
     #[must_use]
     pub fn lines(&self) -> Vec<String> {
-        self.rows().into_iter().map(|row| format!("{}  {}", row.figures, row.state)).collect()
+        self.rows().iter().map(Row::whole).collect()
     }
 
     fn rows(&self) -> Vec<Row> {
@@ -104,24 +104,38 @@ impl Board {
     }
 }
 
-/// The two parts of a line: they may have to go on two.
+/// The parts of a line: on a narrow terminal they go on two or three.
 struct Row {
-    /// Name, time, numbers.
+    /// Name, time, readings.
     figures: String,
+    /// Efficiency and the deviation from the curve; empty without a present state.
+    judgement: String,
     /// How it stands, in words.
     state: String,
 }
 
 impl Row {
+    /// All of it in one line.
+    fn whole(&self) -> String {
+        let parts = [&self.figures, &self.judgement, &self.state];
+        parts.into_iter().filter(|part| !part.is_empty()).map(String::as_str).collect::<Vec<_>>().join("  ")
+    }
+
     /// The row on a terminal of so many columns (0: not known). A line that wraps by itself would be counted as one and
-    /// leave its rest behind when it is drawn again.
+    /// leave its rest behind when it is drawn again; a number cut at the edge would be another number.
     fn fit(&self, columns: usize) -> Vec<String> {
-        let whole = format!("{}  {}", self.figures, self.state);
-        if columns < 20 || whole.chars().count() < columns {
+        let whole = self.whole();
+        let fits = |text: &str| text.chars().count() < columns;
+        if columns < 20 || fits(&whole) {
             return vec![whole];
         }
         let cut = |text: String| text.chars().take(columns - 1).collect();
-        vec![cut(self.figures.clone()), cut(format!("    {}", self.state))]
+        let both = format!("{}  {}", self.figures, self.judgement);
+        let state = cut(format!("    {}", self.state));
+        if fits(&both) || self.judgement.is_empty() {
+            return vec![cut(if self.judgement.is_empty() { self.figures.clone() } else { both }), state];
+        }
+        vec![cut(self.figures.clone()), cut(format!("    {}", self.judgement)), state]
     }
 }
 
@@ -133,13 +147,13 @@ fn row(machine: &Machine, width: usize, silent: Duration) -> Row {
         } else {
             format!("no data yet, for {} s", silent.as_secs())
         };
-        return Row { figures: format!("{name:<width$}"), state };
+        return Row { figures: format!("{name:<width$}"), judgement: String::new(), state };
     };
     let time = clock_words(now.at_us.saturating_sub(machine.first_us));
     if silent >= machine.silent_after {
         let alarm = if machine.active.is_empty() { String::new() } else { format!("; {}", state_words(machine, now)) };
         let state = format!("no data for {} s{alarm}", silent.as_secs());
-        return Row { figures: format!("{name:<width$}  {time}"), state };
+        return Row { figures: format!("{name:<width$}  {time}"), judgement: String::new(), state };
     }
     let speed = value(now.record.sample.channel(Channel::Speed))
         .map(|speed| format!("{:.0} rev/min", AngularSpeed::from_radians_per_second(speed).revolutions_per_minute()));
@@ -151,20 +165,17 @@ fn row(machine: &Machine, width: usize, silent: Duration) -> Row {
     let efficiency = now.estimate.efficiency.ok().map(|part| format!("{:.0} %", 100.0 * part.value.fraction()));
     let against = match (now.estimate.head_residual, now.estimate.expected_head) {
         (Ok(residual), Ok(expected)) if expected.value.metres() != 0.0 => {
-            Some(format!("{:+.1} %", 100.0 * residual.value.metres() / expected.value.metres()))
+            let share = 100.0 * residual.value.metres() / expected.value.metres();
+            // Never "-0.0 %": what rounds to zero has no sign.
+            Some(if share.abs() < 0.05 { "0.0 %".to_owned() } else { format!("{share:+.1} %") })
         }
         _ => None,
     };
     let or_dash = |text: Option<String>| text.unwrap_or_else(|| "-".into());
-    let figures = format!(
-        "{name:<width$}  {time}  {:>12}  {:>10}  head {:>14}  efficiency {:>4}  against curve {:>7}",
-        or_dash(speed),
-        or_dash(flow),
-        or_dash(head),
-        or_dash(efficiency),
-        or_dash(against),
-    );
-    Row { figures, state: state_words(machine, now) }
+    let figures =
+        format!("{name:<width$}  {time}  {:>12}  {:>10}  head {:>14}", or_dash(speed), or_dash(flow), or_dash(head));
+    let judgement = format!("efficiency {:>4}  against curve {:>7}", or_dash(efficiency), or_dash(against));
+    Row { figures, judgement, state: state_words(machine, now) }
 }
 
 fn value(reading: &Reading) -> Option<f32> {
@@ -367,7 +378,7 @@ mod tests {
 
     fn show(machine: &Machine, silent: u64) -> String {
         let row = row(machine, 6, Duration::from_secs(silent));
-        let text = format!("{} {}", row.figures, row.state);
+        let text = row.whole();
         text.split_whitespace().collect::<Vec<_>>().join(" ")
     }
 
@@ -388,9 +399,25 @@ mod tests {
         let row = row(&running(), 6, Duration::ZERO);
         assert_eq!(row.fit(0).len(), 1);
         assert_eq!(row.fit(200).len(), 1);
-        let two = row.fit(60);
-        assert_eq!(two[1], "    no alarm");
-        assert!(two.iter().all(|line| line.chars().count() < 60), "{two:?}");
+        // The numbers are whole or on a line of their own, whatever the width.
+        for columns in 50..140 {
+            let lines = row.fit(columns);
+            assert!(lines.iter().all(|line| line.chars().count() < columns), "{lines:?}");
+            assert!(lines.last().unwrap().ends_with("no alarm"), "{lines:?}");
+            assert!(lines.iter().any(|line| line.contains("against curve  -2.0 %")), "{lines:?}");
+        }
+        assert_eq!(row.fit(110).len(), 2);
+        let three = row.fit(80);
+        assert_eq!(three[1..], ["    efficiency 74 %  against curve  -2.0 %", "    no alarm"]);
+    }
+
+    #[test]
+    fn a_deviation_that_rounds_to_zero_has_no_sign() {
+        let mut machine = running();
+        if let Some(now) = &mut machine.now {
+            now.estimate.head_residual = Ok(estimated::<Head>(-0.01, 0.3));
+        }
+        assert!(show(&machine, 0).contains("against curve 0.0 %"), "{}", show(&machine, 0));
     }
 
     #[test]

@@ -189,7 +189,13 @@ fn an_impeller_gets_the_slip_factor_of_its_dimensions() {
     assert!(report.by_wiesner && (report.slip_factor - expected).abs() < 1e-12, "{report:?}");
     let (model, promised) = report.torque_at_best.unwrap();
     assert!(model > 0.8 * promised && model < 1.2 * promised, "{report:?}");
-    assert_eq!(machine.profile.impeller.unwrap().inlet_whirl, 0.0);
+    let impeller = machine.profile.impeller.unwrap();
+    assert_eq!(impeller.inlet_whirl, 0.0);
+    // π·315 mm·12 mm, less 6 blades that each take 4 mm/sin 25° of the circumference.
+    let circumference = std::f64::consts::PI * 0.315;
+    let free = (circumference - 6.0 * 0.004 / 25_f64.to_radians().sin()) * 0.012;
+    assert!((f64::from(impeller.outlet_area) / free - 1.0).abs() < 1e-6, "{} m2, not {free}", impeller.outlet_area);
+    assert!(impeller.outlet_area < 0.95 * 0.012 * circumference as f32, "the blades take their part");
 }
 
 #[test]

@@ -5,7 +5,12 @@
 
 mod blower;
 mod euler;
+mod fluids;
 mod head_and_power;
+mod operating_point;
+mod regions;
+mod run_lengths;
+mod sensors;
 mod similarity;
 mod slip;
 mod taps;
@@ -36,10 +41,19 @@ fn run(file: &str, checks: &[Check]) {
 /// A file, the groups of checks that use it, and the rows left out.
 type Account = (&'static str, &'static [&'static [Check]], &'static [OutOfScope]);
 
-const ACCOUNT: [Account; 4] = [
+const ACCOUNT: [Account; 9] = [
+    ("01_air", &[fluids::ALTITUDE, fluids::STANDARD_ATMOSPHERE, fluids::MOIST_AIR, fluids::SATURATED_AIR], &[]),
+    (
+        "01_water",
+        &[fluids::WATER_EXACT, fluids::WATER_VAPOUR, fluids::WATER_DENSITY, fluids::WATER_VISCOSITY],
+        fluids::WATER_OUT_OF_SCOPE,
+    ),
     ("02_head_npsh_fan", &[head_and_power::CHECKS], head_and_power::OUT_OF_SCOPE),
     ("03_euler_textbook", &[euler::CHECKS, slip::CHECKS], euler::OUT_OF_SCOPE),
-    ("04_similarity", &[similarity::CHECKS], similarity::OUT_OF_SCOPE),
+    ("04_similarity", &[similarity::CHECKS, regions::SPECIFIC_SPEEDS], similarity::OUT_OF_SCOPE),
+    ("05_viscosity", &[fluids::VISCOUS], fluids::VISCOUS_OUT_OF_SCOPE),
+    ("07_sensors", &[sensors::CHECKS], sensors::OUT_OF_SCOPE),
+    ("07_orifice_grid", &[sensors::GRID], &[]),
     ("09_uncertainty", &[uncertainty::CHECKS], &[]),
 ];
 

@@ -25,12 +25,15 @@ pub const F64_ROUNDING: f64 = 1e-14;
 pub struct Row {
     /// Its name, file and number.
     pub id: String,
-    /// Inputs, in words.
+    /// Inputs, in words; where the file has several columns for them, `heading=entry` of each.
     pub given: String,
     /// What is asked for.
     pub quantity: String,
-    /// The figures as printed; several where the quantity is several (`;` between them).
+    /// The figures as printed; several where the quantity is several (`;` between them). Empty where the answer is a
+    /// word.
     pub expected: Vec<f64>,
+    /// The answer where it is a word (a state, a class); empty where it is figures.
+    pub word: String,
     /// Unit of `expected`.
     pub unit: String,
     /// Tolerance on `expected`, in `unit`.
@@ -82,7 +85,8 @@ pub fn rows(file: &str) -> Result<Vec<Row>, RowError> {
     let path = path(file);
     let fail = |source| RowError::Read { path: path.clone(), source };
     let mut reader = csv::Reader::from_path(&path).map_err(fail)?;
-    reader.records().map(|record| row(&path, &record.map_err(fail)?)).collect()
+    let headings = reader.headers().map_err(fail)?.clone();
+    reader.records().map(|record| row(&path, &headings, &record.map_err(fail)?)).collect()
 }
 
 /// Where `reference/<file>.csv` lies.
@@ -91,8 +95,15 @@ pub fn path(file: &str) -> PathBuf {
     Path::new(env!("CARGO_MANIFEST_DIR")).join("reference").join(file).with_extension("csv")
 }
 
-fn row(path: &Path, record: &csv::StringRecord) -> Result<Row, RowError> {
+/// How many columns follow the inputs in every file: quantity, expected, unit, tol_abs, tol_rel_f64, tol_rel_f32,
+/// status, tol_why, recomputed, source.
+const COLUMNS_AFTER_INPUTS: usize = 10;
+
+fn row(path: &Path, headings: &csv::StringRecord, record: &csv::StringRecord) -> Result<Row, RowError> {
+    // The name comes first; how many columns of inputs lie between it and the quantity differs from file to file.
+    let inputs = headings.len().saturating_sub(COLUMNS_AFTER_INPUTS + 1);
     let text = |column: usize| record.get(column - 1).unwrap_or("").trim();
+    let after = |column: usize| column + 1 + inputs;
     let bad = |column: usize, allowed| RowError::BadColumn {
         path: path.to_owned(),
         row: text(1).to_owned(),
@@ -101,23 +112,35 @@ fn row(path: &Path, record: &csv::StringRecord) -> Result<Row, RowError> {
         allowed,
     };
     let number = |column: usize| text(column).parse::<f64>().map_err(|_| bad(column, "a number"));
-    if text(9) != "ok" {
-        return Err(bad(9, "ok: the other kinds of row have no check yet"));
+    if text(after(7)) != "ok" {
+        return Err(bad(after(7), "ok: the other kinds of row have no check yet"));
     }
+    let parts: Vec<_> = text(after(2)).split(';').map(str::parse::<f64>).collect();
+    let is_word = !text(after(2)).is_empty() && parts.iter().all(Result::is_err);
+    let expected = if is_word {
+        Vec::new()
+    } else {
+        let numbers: Result<_, _> = parts.into_iter().collect();
+        numbers.map_err(|_| bad(after(2), "numbers with ; between them"))?
+    };
+    let given = if inputs == 1 {
+        text(2).to_owned()
+    } else {
+        let heading = |column: usize| headings.get(column - 1).unwrap_or("");
+        (2..2 + inputs).map(|column| format!("{}={}", heading(column), text(column))).collect::<Vec<_>>().join("; ")
+    };
     Ok(Row {
         id: text(1).to_owned(),
-        given: text(2).to_owned(),
-        quantity: text(3).to_owned(),
-        expected: text(4)
-            .split(';')
-            .map(|part| part.parse().map_err(|_| bad(4, "numbers with ; between them")))
-            .collect::<Result<_, _>>()?,
-        unit: text(5).to_owned(),
-        tol_abs: number(6)?,
-        tol_rel_f64: number(7)?,
-        tol_rel_f32: number(8)?,
-        recomputed: if text(11).is_empty() { None } else { Some(number(11)?) },
-        source: text(12).to_owned(),
+        given,
+        quantity: text(after(1)).to_owned(),
+        expected,
+        word: if is_word { text(after(2)).to_owned() } else { String::new() },
+        unit: text(after(3)).to_owned(),
+        tol_abs: number(after(4))?,
+        tol_rel_f64: number(after(5))?,
+        tol_rel_f32: number(after(6))?,
+        recomputed: if text(after(9)).is_empty() { None } else { Some(number(after(9))?) },
+        source: text(after(10)).to_owned(),
     })
 }
 
@@ -165,6 +188,7 @@ mod tests {
             given: String::new(),
             quantity: "head".to_owned(),
             expected: vec![11.23],
+            word: String::new(),
             unit: "m".to_owned(),
             tol_abs: 0.006,
             tol_rel_f64: 0.0,
@@ -197,10 +221,54 @@ mod tests {
         assert!(row.check(&[], Arithmetic::Single).is_err());
     }
 
+    const HEADINGS: [&str; 12] = [
+        "case_id",
+        "given",
+        "quantity",
+        "expected",
+        "unit",
+        "tol_abs",
+        "tol_rel_f64",
+        "tol_rel_f32",
+        "status",
+        "tol_why",
+        "recomputed",
+        "source",
+    ];
+
     #[test]
     fn a_damaged_row_is_named() {
         let record = csv::StringRecord::from(vec!["row-7", "", "H", "1;x", "m", "0.1", "0", "2e-6", "ok", "", "", ""]);
-        let said = row(Path::new("some.csv"), &record).unwrap_err().to_string();
+        let headings = csv::StringRecord::from(HEADINGS.to_vec());
+        let said = row(Path::new("some.csv"), &headings, &record).unwrap_err().to_string();
         assert_eq!(said, "some.csv row row-7: column 4 holds \"1;x\", expected numbers with ; between them");
+    }
+
+    #[test]
+    fn several_columns_of_inputs_and_a_word_for_an_answer() {
+        let mut headings = HEADINGS.to_vec();
+        headings.insert(1, "kind");
+        let (headings, record) = (
+            csv::StringRecord::from(headings),
+            csv::StringRecord::from(vec![
+                "row-8",
+                "loop",
+                "3.5 mA",
+                "state",
+                "failed",
+                "-",
+                "0",
+                "0",
+                "2e-6",
+                "ok",
+                "",
+                "",
+                "a standard",
+            ]),
+        );
+        let row = row(Path::new("some.csv"), &headings, &record).unwrap();
+        assert_eq!((row.given.as_str(), row.word.as_str()), ("kind=loop; given=3.5 mA", "failed"));
+        assert_eq!((row.expected.as_slice(), row.source.as_str()), ([].as_slice(), "a standard"));
+        assert!(row.check(&[0.0], Arithmetic::Single).is_err(), "a word is no figure");
     }
 }

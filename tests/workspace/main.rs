@@ -4,6 +4,8 @@
 //! Host and controller must compute the same bits, so the crates below the core must have the same versions in the two
 //! lock files: the boards are a workspace of their own.
 
+mod core_source;
+
 use std::{
     collections::{BTreeMap, BTreeSet},
     fs,

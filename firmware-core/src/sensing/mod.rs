@@ -1,9 +1,28 @@
 //! From raw electrical readings to values: which channels there are, how a loop current and shaft pulses become one.
 
+pub mod calibration;
 pub mod current_loop;
+pub mod filter;
+pub mod flow_element;
+pub mod flow_pulse;
+pub mod health;
+pub mod lag;
+#[cfg(any(feature = "std", test))]
+pub mod orifice_design;
 pub mod pulse;
+pub mod resistance_thermometer;
 
-use crate::deviation::Deviation;
+use crate::{deviation::Deviation, quantity::Quantity};
+
+/// A value with its standard uncertainty, as the sensing laws give it; the conditioned sample codes it into a byte.
+#[derive(Clone, Copy, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub struct Measured<Q: Quantity> {
+    /// The value.
+    pub value: Q,
+    /// Its standard uncertainty, in the SI unit of the value (kelvin for a temperature), not negative; NaN for unknown.
+    pub deviation: f32,
+}
 
 /// The measured quantities of one machine.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Hash, PartialOrd, Ord)]

@@ -26,7 +26,7 @@ impl Check {
     /// # Errors
     /// [`config::ConfigError`] with every problem found.
     pub fn run(&self) -> anyhow::Result<ExitCode> {
-        print!("{}", report(&config::load_any(&self.path)?));
+        super::say(&report(&config::load_any(&self.path)?))?;
         Ok(ExitCode::SUCCESS)
     }
 }

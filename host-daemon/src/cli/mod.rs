@@ -1,7 +1,11 @@
 //! The command line: one file per command, exit codes in one place.
 
+use anyhow::Context as _;
 use clap::{Parser, Subcommand};
-use std::process::ExitCode;
+use std::{
+    io::{self, Write as _},
+    process::ExitCode,
+};
 
 pub mod check;
 pub mod ports;
@@ -37,7 +41,14 @@ pub const BAD_CONFIGURATION: u8 = 64;
 /// Runs the command line of this process.
 #[must_use]
 pub fn main() -> ExitCode {
-    let arguments = Arguments::parse();
+    let arguments = match Arguments::try_parse() {
+        Ok(arguments) => arguments,
+        Err(wrong) => {
+            // Help and version come this way, too; nobody is left to hear that a terminal has gone.
+            let _ = wrong.print();
+            return if wrong.use_stderr() { ExitCode::from(BAD_CONFIGURATION) } else { ExitCode::SUCCESS };
+        }
+    };
     let result = match &arguments.command {
         Command::Watch(command) => command.run(),
         Command::Check(command) => command.run(),
@@ -49,9 +60,33 @@ pub fn main() -> ExitCode {
     match result {
         Ok(code) => code,
         Err(error) => {
-            eprintln!("offcurve: {error:#}");
+            // With nobody to hear it the exit code has to do.
+            let _ = writeln!(io::stderr().lock(), "offcurve: {}", words(&error));
             let configuration = error.downcast_ref::<crate::config::ConfigError>().is_some();
             ExitCode::from(if configuration { BAD_CONFIGURATION } else { 1 })
         }
+    }
+}
+
+/// An error with its causes in one text, without those whose words are in it already: many libraries repeat theirs.
+fn words(error: &anyhow::Error) -> String {
+    let mut text = error.to_string();
+    for cause in error.chain().skip(1).map(ToString::to_string) {
+        if !text.contains(&cause) {
+            text = format!("{text}: {cause}");
+        }
+    }
+    text
+}
+
+/// Writes a command's result to standard output. A reader that has gone (`| head`) has heard enough: no error.
+///
+/// # Errors
+/// Anything else that keeps it from being written, such as a full disk.
+fn say(text: &str) -> anyhow::Result<()> {
+    let mut out = io::stdout().lock();
+    match out.write_all(text.as_bytes()).and_then(|()| out.flush()) {
+        Err(error) if error.kind() == io::ErrorKind::BrokenPipe => Ok(()),
+        other => other.context("cannot write to standard output"),
     }
 }

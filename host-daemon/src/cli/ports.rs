@@ -22,7 +22,7 @@ impl Ports {
     /// When the system does not tell its ports.
     pub fn run(&self) -> anyhow::Result<ExitCode> {
         let ports = serialport::available_ports()?;
-        print!("{}", listing(&ports, &[Path::new("/dev/serial/by-id"), Path::new("/dev/serial/by-path")]));
+        super::say(&listing(&ports, &[Path::new("/dev/serial/by-id"), Path::new("/dev/serial/by-path")]))?;
         Ok(ExitCode::SUCCESS)
     }
 }

@@ -4,7 +4,7 @@ use crate::{
     config::Machine,
     replay::{self, Options},
 };
-use std::{path::PathBuf, process::ExitCode, time::Instant};
+use std::{io::Write as _, path::PathBuf, process::ExitCode, time::Instant};
 
 /// How many alarm changes are printed; all of them are in `alarms.csv`.
 const SHOWN: usize = 20;
@@ -38,7 +38,7 @@ impl Replay {
     pub fn run(&self) -> anyhow::Result<ExitCode> {
         let machine = Machine::load(&self.machine)?;
         for warning in &machine.warnings {
-            eprintln!("{}: note: {warning}", machine.file.display());
+            note(&format!("{}: note: {warning}\n", machine.file.display()));
         }
         let start = Instant::now();
         let summary = replay::run(&Options {
@@ -50,17 +50,17 @@ impl Replay {
         let seconds = start.elapsed().as_secs_f64();
         let findings = summary.findings.to_string();
         if !findings.is_empty() {
-            eprintln!("{}:", self.input.display());
-            eprint!("{findings}");
+            note(&format!("{}:\n{findings}", self.input.display()));
         }
+        let mut out = String::new();
         for (time, change) in summary.changes.iter().take(SHOWN) {
-            println!("{time} {} {}: {}", change.kind, change.state.id(), change.text);
+            out += &format!("{time} {} {}: {}\n", change.kind, change.state.id(), change.text);
         }
         if summary.changes.len() > SHOWN {
-            println!("and {} more changes, see alarms.csv", summary.changes.len() - SHOWN);
+            out += &format!("and {} more changes, see alarms.csv\n", summary.changes.len() - SHOWN);
         }
-        println!(
-            "{}: {} rows in {seconds:.2} s ({:.0} rows/s); results in {}",
+        out += &format!(
+            "{}: {} rows in {seconds:.2} s ({:.0} rows/s); results in {}\n",
             machine.name,
             summary.rows,
             summary.rows as f64 / seconds.max(1e-9),
@@ -69,12 +69,18 @@ impl Replay {
         if !self.estimates_only {
             let active: Vec<String> = summary.active.iter().map(ToString::to_string).collect();
             let state = if active.is_empty() { "none".to_owned() } else { active.join(", ") };
-            println!(
-                "rows watched: {}; alarm changes: {}; active at the end: {state}",
+            out += &format!(
+                "rows watched: {}; alarm changes: {}; active at the end: {state}\n",
                 summary.watched,
                 summary.changes.len()
             );
         }
+        super::say(&out)?;
         Ok(ExitCode::SUCCESS)
     }
+}
+
+/// Says something beside the result; with nobody to hear it the result counts all the same.
+fn note(text: &str) {
+    let _ = std::io::stderr().lock().write_all(text.as_bytes());
 }

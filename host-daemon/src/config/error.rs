@@ -65,7 +65,12 @@ pub(super) fn read(path: &Path) -> Result<String, ConfigError> {
     let failed = |source| ConfigError::Read { file: path.to_owned(), source };
     let mut text = String::new();
     let file = std::fs::File::open(path).map_err(failed)?;
-    std::io::Read::read_to_string(&mut std::io::Read::take(file, LARGEST_FILE + 1), &mut text).map_err(failed)?;
+    match std::io::Read::read_to_string(&mut std::io::Read::take(file, LARGEST_FILE + 1), &mut text) {
+        Err(error) if error.kind() == std::io::ErrorKind::InvalidData => {
+            return Err(ConfigError::one(path, None, "", "not a text in UTF-8: this is no machine or plant file"));
+        }
+        other => other.map_err(failed)?,
+    };
     if text.len() as u64 > LARGEST_FILE {
         return Err(ConfigError::one(path, None, "", "larger than 1 MiB: this is no machine or plant file"));
     }

@@ -4,7 +4,7 @@
 use super::{
     curve::{self, BestEfficiency, Curve, ImpellerReport},
     error::{self, ConfigError},
-    reader::{Bounds, Document},
+    reader::{Bounds, Document, Kind, top_level_kind},
     review,
     sensors::{self, Columns, Sensors},
     settings,
@@ -57,6 +57,11 @@ impl Machine {
     /// [`ConfigError::Invalid`] with every problem found.
     pub fn parse(text: &str, path: &Path) -> Result<Self, ConfigError> {
         let document = Document::parse(text, path)?;
+        if let Some(Kind::Plant) = top_level_kind(text) {
+            let message =
+                "this is a plant file; a machine file is wanted, one of those that its [[controller]] tables name";
+            return Err(ConfigError::one(path, None, "", message));
+        }
         let machine = read(&document, path);
         if machine.is_none() && document.is_clean() {
             // Every `None` above reports a problem; this is the net below.

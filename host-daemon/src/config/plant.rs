@@ -4,7 +4,7 @@ use super::{
     Machine,
     curve::or_default,
     error::{self, ConfigError},
-    reader::{Bounds, Document, Section},
+    reader::{Bounds, Document, Kind, Section, top_level_kind},
     units::Dimension,
 };
 use std::path::{Path, PathBuf};
@@ -69,6 +69,11 @@ impl PlantConfig {
     /// [`ConfigError`], with the problems of the machine files too.
     pub fn parse(text: &str, path: &Path) -> Result<Self, ConfigError> {
         let document = Document::parse(text, path)?;
+        if let Some(Kind::Machine) = top_level_kind(text) {
+            let message =
+                "this is a machine file; a plant file is wanted, whose [[controller]] tables name machine files";
+            return Err(ConfigError::one(path, None, "", message));
+        }
         let plant = read(&document, path);
         document.finish()?;
         plant.ok_or_else(|| ConfigError::one(path, None, "", "cannot be used"))

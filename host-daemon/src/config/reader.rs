@@ -23,11 +23,14 @@ pub(super) enum Kind {
 pub(super) fn top_level_kind(text: &str) -> Option<Kind> {
     let (table, errors) = DeTable::parse_recoverable(text);
     let table = table.get_ref();
-    if table.contains_key("controller") && !table.contains_key("machine") {
+    // A machine file has a table of that name, too: [controller], where a plant has [[controller]].
+    let controllers = table.get("controller").is_some_and(|value| matches!(value.get_ref(), DeValue::Array(_)));
+    let has = |key: &&str| table.contains_key(*key);
+    if controllers && !table.contains_key("machine") {
         Some(Kind::Plant)
-    } else if table.contains_key("machine") || table.contains_key("curve") || !errors.is_empty() {
+    } else if ["machine", "curve", "taps", "fluid", "sensors"].iter().any(has) || !errors.is_empty() {
         Some(Kind::Machine)
-    } else if table.contains_key("store") {
+    } else if ["store", "controller"].iter().any(has) {
         Some(Kind::Plant)
     } else {
         None

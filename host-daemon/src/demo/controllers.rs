@@ -97,7 +97,7 @@ impl Controllers {
             Running::Host(controller) => {
                 let status = controller.status();
                 format!(
-                    "{name}: {:.0} plant minutes, {} records sent, {} frames dropped by the controller.",
+                    "{name}: {:.0} plant minutes, {} records made, {} frames dropped by the controller.",
                     status.plant_seconds / 60.0,
                     status.records_made,
                     status.dropped

@@ -13,6 +13,7 @@ use clap::{Args, ValueEnum};
 use controllers::Controllers;
 use std::{
     fs,
+    io::Write as _,
     path::{Path, PathBuf},
     process::ExitCode,
     time::{Duration, Instant},
@@ -37,6 +38,13 @@ const STOP_LIMIT: Duration = Duration::from_secs(5);
 /// How long a dead daemon stays away, so that the gap can be seen.
 const RESTART_AFTER: Duration = Duration::from_secs(1);
 const TICK: Duration = Duration::from_millis(100);
+
+/// Prints a line. That nobody reads it any more is no reason to end: the plant goes on.
+macro_rules! tell {
+    ($($text:tt)*) => {{
+        let _ = writeln!(std::io::stdout().lock(), $($text)*);
+    }};
+}
 
 /// Which build of the controller program runs well pump 2.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, ValueEnum)]
@@ -71,7 +79,7 @@ pub struct Demo {
     #[arg(long, value_enum, default_value = "host")]
     controller: ControllerChoice,
     /// Plant seconds per second, 0.1 to 200. Default: 60, with the emulated controller 20.
-    #[arg(long, value_name = "FACTOR", value_parser = speed)]
+    #[arg(long, value_name = "FACTOR", value_parser = speed, allow_negative_numbers = true)]
     speed: Option<f64>,
     /// The firmware image for the emulated controller. Default: where `tests/boards.sh build` puts it.
     #[arg(long, value_name = "ELF")]
@@ -151,15 +159,15 @@ impl Demo {
     }
 
     fn greet(&self, folder: &Path, speed: f64) {
-        println!("An invented waterworks with two well pumps; no hardware. It advises; it is no protective device.");
-        println!("Fast time: 1 s here is {} on the plant.", plant_time(speed));
-        println!("Files: {} (store waterworks.db, the daemon's log daemon.log)", folder.display());
+        tell!("An invented waterworks with two well pumps; no hardware. It advises; it is no protective device.");
+        tell!("Fast time: 1 s here is {} on the plant.", plant_time(speed));
+        tell!("Files: {} (store waterworks.db, the daemon's log daemon.log)", folder.display());
         let fault = 20.0 * 60.0 / speed;
-        println!("At plant minute 20, in about {fault:.0} s, the wear ring of well pump 2 begins to open.");
+        tell!("At plant minute 20, in about {fault:.0} s, the wear ring of well pump 2 begins to open.");
         if self.length.is_none() {
-            println!("Ctrl-C ends it.");
+            tell!("Ctrl-C ends it.");
         }
-        println!();
+        tell!();
     }
 }
 
@@ -214,7 +222,7 @@ impl Daemon {
             let last = log.lines().last().unwrap_or("nothing");
             anyhow::bail!("the daemon ended by itself ({status}); the last line of {}: {last}", self.log.display());
         }
-        println!("The daemon was killed ({status}); it is started again in a second.");
+        tell!("The daemon was killed ({status}); it is started again in a second.");
         tokio::time::sleep(RESTART_AFTER).await;
         self.child = spawn(&self.plant_file, &self.log)?;
         Ok(())
@@ -227,7 +235,7 @@ impl Daemon {
         }
         if tokio::time::timeout(STOP_LIMIT, self.child.wait()).await.is_err() {
             self.child.kill().await?;
-            println!("The daemon did not stop within {} s and was killed.", STOP_LIMIT.as_secs());
+            tell!("The daemon did not stop within {} s and was killed.", STOP_LIMIT.as_secs());
         }
         Ok(())
     }
@@ -247,21 +255,26 @@ fn spawn(plant_file: &Path, log: &Path) -> anyhow::Result<Child> {
 }
 
 fn summary(controllers: &Controllers, plant: &PlantConfig, ran: Duration) -> anyhow::Result<()> {
-    println!("\nRan {:.0} s.", ran.as_secs_f64());
+    tell!("\nRan {:.0} s.", ran.as_secs_f64());
     for line in controllers.report() {
-        println!("{line}");
+        tell!("{line}");
     }
     let totals = store::totals(&plant.store).context("cannot read the store back")?;
-    println!(
-        "Daemon: {} records stored, {} lost ({} gaps), {} duplicates dropped.",
-        totals.records, totals.lost, totals.gaps, totals.duplicates
+    tell!(
+        "Daemon: {} records received, {} stored, {} lost ({} gaps), {} duplicates dropped. What was on the line at the \
+         end counts for none of these.",
+        totals.records + totals.duplicates + totals.conflicts,
+        totals.records,
+        totals.lost,
+        totals.gaps,
+        totals.duplicates
     );
     let raised: Vec<_> = totals.journal.iter().filter(|entry| entry.state == AlarmState::Unacknowledged).collect();
-    println!("Alarms raised: {}.", raised.len());
+    tell!("Alarms raised: {}.", raised.len());
     for entry in raised {
-        println!("- {}: {}: {}", entry.machine, entry.kind, entry.text);
+        tell!("- {}: {}: {}", entry.machine, entry.kind, entry.text);
     }
-    println!("Store: {}", plant.store.display());
+    tell!("Store: {}", plant.store.display());
     Ok(())
 }
 

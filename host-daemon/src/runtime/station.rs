@@ -307,8 +307,10 @@ impl Station {
                 if !std::mem::replace(&mut self.conflict_said, true) {
                     error!(
                         controller = %self.name, boot = record.boot, number = record.number,
-                        "a record of this number with other content is in the store already, and stays. Two controllers \
-                         use the same boot number on this line: give the new one a name of its own in the plant file"
+                        "a record of this number with other content is in the store already, and stays; the new one is \
+                         refused. Either another controller uses the same boot number on this line: give it a name of \
+                         its own in the plant file. Or this one does not count its starts: its board must keep a boot \
+                         number that rises"
                     );
                 }
                 return (None, None);

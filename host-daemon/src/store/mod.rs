@@ -218,6 +218,15 @@ pub enum StoreError {
         #[source]
         source: rusqlite::Error,
     },
+    /// The file or its folder may not be written by this user, or cannot be made there.
+    #[error(
+        "cannot write the store {path}: the daemon's user needs the right to write the file and its folder, where the \
+         engine keeps its log beside it"
+    )]
+    NotWritable {
+        /// The file.
+        path: PathBuf,
+    },
     /// A file of something else.
     #[error("{path} is not an offcurve store; nothing was changed in it, name another file")]
     Foreign {

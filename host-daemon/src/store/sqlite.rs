@@ -53,7 +53,15 @@ impl SqliteStore {
         if let Some(folder) = folder.filter(|folder| !folder.is_dir()) {
             return Err(StoreError::NoFolder { folder: folder.to_owned() });
         }
-        let failed = |source| StoreError::Open { path: path.to_owned(), source };
+        if path.is_dir() {
+            return Err(StoreError::Foreign { path: path.to_owned() });
+        }
+        let failed = |source: rusqlite::Error| match source.sqlite_error_code() {
+            Some(ErrorCode::ReadOnly | ErrorCode::CannotOpen | ErrorCode::PermissionDenied) => {
+                StoreError::NotWritable { path: path.to_owned() }
+            }
+            _ => StoreError::Open { path: path.to_owned(), source },
+        };
         let flags = OpenFlags::SQLITE_OPEN_READ_WRITE
             | OpenFlags::SQLITE_OPEN_CREATE
             | OpenFlags::SQLITE_OPEN_NO_MUTEX
@@ -65,6 +73,8 @@ impl SqliteStore {
             Err(StoreError::Read { source, .. }) if source.sqlite_error_code() == Some(ErrorCode::NotADatabase) => {
                 return Err(StoreError::Foreign { path: path.to_owned() });
             }
+            // The log of a store is written even by who only reads it.
+            Err(StoreError::Read { source, .. }) => return Err(failed(source)),
             other => other?,
         };
         connection.pragma_update(None, "journal_mode", "WAL").map_err(failed)?;
@@ -366,4 +376,25 @@ fn read_totals(connection: &Connection) -> rusqlite::Result<Totals> {
         Ok(JournalEntry { at_us, machine, kind, state, causes: row.get(4)?, text: row.get(5)? })
     })?;
     Ok(Totals { records, lost, gaps, duplicates, conflicts, journal: journal.collect::<rusqlite::Result<_>>()? })
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    /// `synchronous` belongs to a connection and cannot be seen from another one: without FULL a power cut may take
+    /// batches that were acknowledged, and nothing else would show it.
+    #[test]
+    fn this_connection_flushes_every_commit() {
+        let folder = tempfile::tempdir().unwrap();
+        let path = folder.path().join("plant.db");
+        for opening in ["new", "opened again"] {
+            let store = SqliteStore::open(&path).unwrap();
+            let number = |name: &str| -> i64 {
+                store.connection.pragma_query_value(None, name, |row| row.get(0)).expect("a setting of the engine")
+            };
+            assert_eq!(number("synchronous"), 2, "FULL, {opening}");
+            assert_eq!(number("foreign_keys"), 1, "{opening}");
+        }
+    }
 }

@@ -90,6 +90,8 @@ pub struct Watch {
     sensors: [SensorTimer; Channel::ALL.len()],
     alike: u32,
     states: BTreeMap<AlarmKind, AlarmState>,
+    /// An off-curve alarm was put back, and no block has been judged since.
+    restored: bool,
     judged_blocks: u64,
     closed_blocks: u64,
 }
@@ -108,6 +110,7 @@ impl Watch {
             sensors: Default::default(),
             alike: 0,
             states: BTreeMap::new(),
+            restored: false,
             judged_blocks: 0,
             closed_blocks: 0,
         }
@@ -119,6 +122,7 @@ impl Watch {
         if kind == AlarmKind::OffCurve && state.is_active() {
             // Which of the two was up is not in the journal; either keeps the alarm until the plant is back inside.
             self.head = Chart::standing(f64::NAN);
+            self.restored = true;
         }
     }
 
@@ -193,12 +197,14 @@ impl Watch {
 
     fn watch_sensors(&mut self, at: f64, sample: &ConditionedSample, changes: &mut Vec<AlarmChange>) {
         for (place, channel) in Channel::ALL.into_iter().enumerate() {
+            let kind = AlarmKind::SensorFailed(channel);
             let fault = match sample.channel(channel) {
-                Ok(_) => None,
+                // A sensor that was taken off after its alarm: nobody will see it read again.
+                Err(ChannelFault::NotFitted) if self.state(kind).is_active() => None,
                 Err(ChannelFault::NotFitted) => continue,
+                Ok(_) => None,
                 Err(fault) => Some(*fault),
             };
-            let kind = AlarmKind::SensorFailed(channel);
             if fault.is_some() == self.state(kind).is_active() {
                 self.sensors[place].opposite_since = None;
                 continue;
@@ -208,9 +214,12 @@ impl Watch {
                 continue;
             }
             self.sensors[place].opposite_since = None;
-            let text = || match fault {
-                Some(fault) => words::sensor_failed(channel, fault),
-                None => format!("The {} sensor gives readings again.", words::channel_name(channel)),
+            let text = || match sample.channel(channel) {
+                Err(ChannelFault::NotFitted) => {
+                    format!("The {} sensor is no longer fitted.", words::channel_name(channel))
+                }
+                Err(fault) => words::sensor_failed(channel, *fault),
+                Ok(_) => format!("The {} sensor gives readings again.", words::channel_name(channel)),
             };
             changes.extend(self.change(at, kind, fault.is_some(), Vec::new, text));
         }
@@ -220,6 +229,10 @@ impl Watch {
         self.judged_blocks += 1;
         let (head, power) =
             (self.settings.chart(self.settings.head_limit), self.settings.chart(self.settings.power_limit));
+        if std::mem::take(&mut self.restored) && result.head.is_none() {
+            // No head to compare here: only the power can have raised the alarm, and only it can end it.
+            std::mem::swap(&mut self.head, &mut self.power);
+        }
         if let Some(deviation) = result.head {
             self.head.step(result.from, deviation, &head);
         }

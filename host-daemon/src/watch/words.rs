@@ -40,10 +40,10 @@ pub(crate) fn off_curve(
     text += &format!(", for {:.0} min", (lasted / 60.0).max(1.0));
     let reference = AngularSpeed::from_radians_per_second(profile.reference_speed).revolutions_per_minute();
     if let Some((slow, fast)) = span(blocks, |block| block.speed_ratio * f64::from(reference)) {
-        text += &format!(" at {slow:.0} to {fast:.0} rev/min");
+        text += &format!(" at {} rev/min", range_words(slow, fast));
     }
     if let Some((low, high)) = span(blocks, |block| block.flow * 3600.0) {
-        text += &format!(" and {low:.0} to {high:.0} m3/h");
+        text += &format!(" and {} m3/h", range_words(low, high));
     }
     text += ".";
     if let Some(cost) = cost_words(blocks, mean) {
@@ -58,6 +58,12 @@ pub(crate) fn off_curve(
     }
     text += " Before any work on the machine: lock out, tag out, relieve pressure; local rules apply.";
     text
+}
+
+/// "1210 to 1480", or one number where both ends round to it.
+fn range_words(low: f64, high: f64) -> String {
+    let (low, high) = (format!("{low:.0}"), format!("{high:.0}"));
+    if low == high { low } else { format!("{low} to {high}") }
 }
 
 /// Power above what the curve needs for the same hydraulic work.
