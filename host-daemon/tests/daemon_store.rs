@@ -53,6 +53,18 @@ fn gaps(path: &Path) -> Vec<(u32, u32)> {
 }
 
 #[test]
+fn a_second_daemon_is_kept_off_a_store() {
+    let folder = tempfile::tempdir().unwrap();
+    let path = folder.path().join("plant.db");
+    let first = SqliteStore::open(&path).unwrap();
+    let refused = SqliteStore::open(&path).unwrap_err();
+    assert!(matches!(refused, StoreError::InUse { .. }), "{refused}");
+    assert!(totals(&path).is_ok(), "reading goes on");
+    drop(first);
+    assert!(SqliteStore::open(&path).is_ok(), "and it is free again");
+}
+
+#[test]
 fn what_is_committed_is_there_without_a_clean_end() {
     let folder = tempfile::tempdir().unwrap();
     let path = folder.path().join("plant.db");

@@ -314,27 +314,33 @@ impl Daemon {
         }
         let (_, outcomes) = self.writer.write(batch).await?;
         let mut acknowledge: Vec<Option<(u64, u32)>> = vec![None; self.stations.len()];
-        let mut judged = Vec::new();
+        let mut to_judge = Vec::new();
         for (pending, outcome) in pending.iter().zip(outcomes) {
             let Some(station) = self.stations.get_mut(pending.station) else { continue };
-            let (result, durable) = station.settle(pending, outcome);
-            if let (Some(slot), Some(durable)) = (acknowledge.get_mut(pending.station), durable) {
-                *slot = Some(durable);
+            let standing = station.count(pending, outcome);
+            if let (Some(slot), true) = (acknowledge.get_mut(pending.station), standing.durable) {
+                *slot = Some((pending.record().boot, pending.record().number));
             }
-            if let Some(Judged { at_us, estimate, changes }) = result {
-                if let Some(board) = &self.listeners.board {
-                    for change in changes.iter().filter(|change| change.kind == AlarmKind::OffCurve) {
-                        board.set_cause(pending.station, change.causes.first().map(|cause| cause.cause));
-                    }
-                    board.update(pending.station, at_us, pending.record(), &estimate, station.active());
-                }
-                judged.extend(changes.into_iter().map(|change| (pending.station, change)));
+            if standing.to_judge {
+                to_judge.push(pending);
             }
         }
         for (link, durable) in self.links.iter().zip(acknowledge) {
             if let Some((boot, number)) = durable {
                 link.acknowledge(boot, number);
             }
+        }
+        let mut judged = Vec::new();
+        for pending in to_judge {
+            let Some(station) = self.stations.get_mut(pending.station) else { continue };
+            let Judged { at_us, estimate, changes } = station.judge(pending);
+            if let Some(board) = &self.listeners.board {
+                for change in changes.iter().filter(|change| change.kind == AlarmKind::OffCurve) {
+                    board.set_cause(pending.station, change.causes.first().map(|cause| cause.cause));
+                }
+                board.update(pending.station, at_us, pending.record(), &estimate, station.active());
+            }
+            judged.extend(changes.into_iter().map(|change| (pending.station, change)));
         }
         self.tell(judged).await
     }

@@ -52,6 +52,15 @@ pub(crate) struct Pending {
     to_judge: bool,
 }
 
+/// What the store's answer means for a record.
+#[derive(Clone, Copy, Debug)]
+pub(crate) struct Standing {
+    /// It may be acknowledged.
+    pub(crate) durable: bool,
+    /// It is new and goes before the watch.
+    pub(crate) to_judge: bool,
+}
+
 /// A judged record.
 pub(crate) struct Judged {
     pub(crate) at_us: i64,
@@ -288,10 +297,9 @@ impl Station {
         batch.gaps.push(gap);
     }
 
-    /// Judges a record that is durable now; `None` when it is not to be judged. Also the number to acknowledge.
-    pub(crate) fn settle(&mut self, pending: &Pending, outcome: Outcome) -> (Option<Judged>, Option<(u64, u32)>) {
-        let Pending { record, at_us, to_judge, .. } = pending;
-        let acknowledge = Some((record.boot, record.number));
+    /// Counts what became of a record in the store.
+    pub(crate) fn count(&mut self, pending: &Pending, outcome: Outcome) -> Standing {
+        let record = &pending.record;
         match outcome {
             Outcome::Stored => self.tally.stored += 1,
             Outcome::FilledGap => {
@@ -300,7 +308,7 @@ impl Station {
             }
             Outcome::Duplicate => {
                 self.tally.duplicates += 1;
-                return (None, acknowledge);
+                return Standing { durable: true, to_judge: false };
             }
             Outcome::Conflict => {
                 self.tally.conflicts += 1;
@@ -313,12 +321,14 @@ impl Station {
                          number that rises"
                     );
                 }
-                return (None, None);
+                return Standing { durable: false, to_judge: false };
             }
         }
-        if !to_judge {
-            return (None, acknowledge);
-        }
+        Standing { durable: true, to_judge: pending.to_judge }
+    }
+
+    /// Recomputes a stored record's estimate and puts it before the watch.
+    pub(crate) fn judge(&mut self, Pending { record, at_us, .. }: &Pending) -> Judged {
         // A new boot's hello may take a moment longer than the last one's: by so much its first records would go back.
         self.judged_us = self.judged_us.max(*at_us);
         let at = self.judged_us as f64 / 1e6;
@@ -328,7 +338,7 @@ impl Station {
         let mut changes: Vec<AlarmChange> = self.watch.compare(at, differs).into_iter().collect();
         changes.extend(self.watch.push(at, &record.sample, &estimate));
         self.tally.alarms += changes.iter().filter(|change| change.state.is_active()).count() as u64;
-        (Some(Judged { at_us: self.judged_us, estimate, changes }), acknowledge)
+        Judged { at_us: self.judged_us, estimate, changes }
     }
 
     /// The row of the journal for a change.

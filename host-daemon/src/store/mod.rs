@@ -227,6 +227,12 @@ pub enum StoreError {
         /// The file.
         path: PathBuf,
     },
+    /// Another daemon has the store open.
+    #[error("the store {path} is in use by another daemon; one store has one writer, name another file")]
+    InUse {
+        /// The file.
+        path: PathBuf,
+    },
     /// A file of something else.
     #[error("{path} is not an offcurve store; nothing was changed in it, name another file")]
     Foreign {

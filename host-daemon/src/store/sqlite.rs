@@ -15,6 +15,7 @@ use offcurve_core::checksum::crc32;
 use rusqlite::{Connection, ErrorCode, OpenFlags, OptionalExtension, Transaction, TransactionBehavior, params};
 use std::{
     collections::HashMap,
+    fs::{File, TryLockError},
     path::{Path, PathBuf},
     sync::Arc,
     time::Duration,
@@ -36,6 +37,8 @@ pub struct SqliteStore {
     connection: Connection,
     path: PathBuf,
     controllers: HashMap<Arc<str>, i64>,
+    /// Held while the store is open; the system lets go of it however the process ends.
+    _lock: File,
 }
 
 /// Fingerprint of the tables.
@@ -77,6 +80,7 @@ impl SqliteStore {
             Err(StoreError::Read { source, .. }) => return Err(failed(source)),
             other => other?,
         };
+        let lock = lock(path)?;
         connection.pragma_update(None, "journal_mode", "WAL").map_err(failed)?;
         connection.pragma_update(None, "synchronous", "FULL").map_err(failed)?;
         connection.pragma_update(None, "journal_size_limit", LOG_LIMIT).map_err(failed)?;
@@ -85,7 +89,7 @@ impl SqliteStore {
             create(&mut connection).map_err(|source| sort(path, source))?;
         }
         let controllers = read_controllers(&connection).map_err(failed)?;
-        Ok(Self { connection, path: path.to_owned(), controllers })
+        Ok(Self { connection, path: path.to_owned(), controllers, _lock: lock })
     }
 
     /// The file.
@@ -96,6 +100,20 @@ impl SqliteStore {
 
     fn read_failed(&self, source: rusqlite::Error) -> StoreError {
         StoreError::Read { path: self.path.clone(), source }
+    }
+}
+
+/// Keeps a second daemon off the store: the engine would let both write, and each would take the other's records for
+/// conflicts. The lock is on a file beside the store, because the engine has locks of its own on the store itself.
+fn lock(path: &Path) -> Result<File, StoreError> {
+    let mut name = path.as_os_str().to_owned();
+    name.push("-lock");
+    let refused = |_| StoreError::NotWritable { path: path.to_owned() };
+    let file = File::options().create(true).truncate(false).write(true).open(name).map_err(refused)?;
+    match file.try_lock() {
+        Ok(()) => Ok(file),
+        Err(TryLockError::WouldBlock) => Err(StoreError::InUse { path: path.to_owned() }),
+        Err(TryLockError::Error(error)) => Err(refused(error)),
     }
 }
 
@@ -150,7 +168,7 @@ fn sort(path: &Path, source: rusqlite::Error) -> StoreError {
 
 impl Store for SqliteStore {
     fn append(&mut self, batch: &Batch) -> Result<Vec<Outcome>, StoreError> {
-        let Self { connection, path, controllers } = self;
+        let Self { connection, path, controllers, .. } = self;
         let mut known = controllers.clone();
         let result = (|| {
             let transaction = connection.transaction_with_behavior(TransactionBehavior::Immediate)?;

@@ -79,7 +79,7 @@ fn cost_words(blocks: &[BlockResult], mean: (Option<Deviation>, Option<Deviation
     (extra > 0.0).then(|| {
         format!(
             " Efficiency {:.0} % where the curve promises {:.0} %: about {:.1} kW (±{:.1} kW) more than the same work \
-             needs.",
+             needs, if the readings are right.",
             100.0 * efficiency,
             100.0 * expected,
             extra / 1000.0,
