@@ -14,6 +14,8 @@
 set -eu
 
 target=thumbv7em-none-eabihf
+# Most instructions one step may take on a Cortex-M4F, whatever the input.
+most_instructions=4000
 symbol=ERROR_this_image_contains_a_reachable_panic
 root=$(cd "$(dirname "$0")/.." && pwd)
 boards=$root/hil-fixtures/boards
@@ -148,9 +150,14 @@ cost() {
     for profile in release proof-3; do
         build_package step-cost "$profile" || fail "no image, see above"
         say "step cost, profile $profile ($(sed -n "/profile.$profile]/,/^\$/s/opt-level = //p" "$boards/Cargo.toml"))"
+        counts=$output/step-cost-$profile.txt
         timeout 600 qemu-system-arm -M mps2-an386 -icount shift=7 -display none -monitor none -serial none \
-            -semihosting-config enable=on,target=native -kernel "$output/$target/$profile/step-cost" ||
+            -semihosting-config enable=on,target=native -kernel "$output/$target/$profile/step-cost" >"$counts" ||
             fail "the image did not finish"
+        cat "$counts"
+        step=$(sed -n 's/^step \([0-9]*\) .*/\1/p' "$counts")
+        [ "${step:-$most_instructions}" -lt "$most_instructions" ] ||
+            fail "profile $profile: a step takes ${step:-an unknown number of} instructions, allowed are $most_instructions"
     done
 }
 

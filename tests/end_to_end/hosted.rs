@@ -30,7 +30,8 @@ fn ten_healthy_hours_raise_no_alarm() {
     let store = open(&folder.store());
     let records = number(&store, "SELECT count(*) FROM record");
     println!("ten healthy hours: {records} records, {:.0} s of wall time", wall.as_secs_f64());
-    assert!(records >= 35_990, "{records} records of 36,000 s at 1 Hz");
+    // What the controller's outbox and the line hold when they are cut never arrives: about a hundred records.
+    assert!(records >= 35_890, "{records} records of 36,000 s at 1 Hz");
     assert_eq!(number(&store, "SELECT count(*) FROM gap"), 0, "gaps");
     assert_eq!(journal(&store), [], "alarms in healthy running");
 }
