@@ -94,6 +94,13 @@ fn a_store_that_cannot_be_is_named_with_what_it_needs() {
 
 #[test]
 #[cfg(feature = "demo")]
+fn an_image_without_an_emulated_controller_is_not_ignored() {
+    let text = refused(folder().path(), &["demo", "--image", "some.elf"], 1);
+    assert!(text.contains("--controller emulated"), "{text}");
+}
+
+#[test]
+#[cfg(feature = "demo")]
 fn a_negative_speed_is_a_wrong_speed() {
     let text = refused(folder().path(), &["demo", "--speed", "-1"], 64);
     assert!(text.contains("a number from 0.1 to 200"), "{text}");

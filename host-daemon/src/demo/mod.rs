@@ -113,6 +113,10 @@ impl Demo {
     }
 
     async fn play(&self) -> anyhow::Result<ExitCode> {
+        anyhow::ensure!(
+            self.image.is_none() || self.controller == ControllerChoice::Emulated,
+            "--image is for the emulated controller; add --controller emulated"
+        );
         let folder = self.folder()?;
         let plant_file = write_files(&folder, self.controller)?;
         let plant = PlantConfig::load(&plant_file)?;
